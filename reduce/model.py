@@ -119,17 +119,24 @@ class Damping:
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
-class _Common:
-    """What every kind carries beside its matrices."""
+class Interface:
+    """The channels of a model, their weights, and what else stays the same from the full model to the small one."""
 
     inputs: tuple[Input, ...] = ()
     outputs: tuple[Output, ...] = ()
     units: UnitSystem = field(default_factory=UnitSystem)
-    unknowns: Unknowns | None = None
     title: str = ""
     source: str = ""  # where it came from (a path, a generator), for messages only
 
-    kind: ClassVar[str] = ""
+    @property
+    def m(self) -> int:
+        """Number of inputs."""
+        return len(self.inputs)
+
+    @property
+    def p(self) -> int:
+        """Number of outputs."""
+        return len(self.outputs)
 
     @property
     def amplitudes(self) -> Real:
@@ -145,19 +152,28 @@ class _Common:
     def has_resolutions(self) -> bool:
         return any(c.resolution is not None for c in self.outputs)
 
-    @property
-    def m(self) -> int:
-        """Number of inputs."""
-        return len(self.inputs)
-
-    @property
-    def p(self) -> int:
-        """Number of outputs."""
-        return len(self.outputs)
-
     def weigh(self, G: Any) -> Any:
         """Weighted transfer matrix ``G[..., k, l] * amplitude_l / resolution_k``, shape (..., p, m)."""
         return G * (self.amplitudes[None, :] / self.resolutions[:, None])
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Origin(Interface):
+    """What a result remembers of its full model when the model itself is not at hand (see `fingerprint.origin_of`)."""
+
+    kind: str
+    n: int
+    fingerprint: str
+    damping: str = "none"  # in words, with its numbers
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class _Common(Interface):
+    """What every kind carries beside its matrices."""
+
+    unknowns: Unknowns | None = None
+
+    kind: ClassVar[str] = ""
 
     def _set(self, **values: Any) -> None:
         for name, value in values.items():

@@ -1,0 +1,89 @@
+"""Stage 2's records: the typed choices and the reduced model."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Any, Literal, TypeAlias
+
+from modesieve.reduce.arrays import Real
+from modesieve.reduce.modal.records import Modes, Ranking
+from modesieve.reduce.response.records import ErrorFigure, FullResponse
+from modesieve.reduce.response.small import SmallSystem
+
+Statics: TypeAlias = Literal["none", "feedthrough", "vectors"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Count:
+    """Keep the first ``modes`` of the ranking, always-kept ones included; coupled cluster members never split."""
+
+    modes: int
+
+
+@dataclass(frozen=True, kw_only=True)
+class Band:
+    """Keep every mode with ``low <= abs(lambda) <= high`` (rad/s)."""
+
+    low: float
+    high: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class Above:
+    """Keep every mode whose ``measure`` is at least ``share`` of the largest (for "decay": at least ``share`` s)."""
+
+    measure: str
+    share: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class Keep:
+    """Keep exactly these mode numbers (and the always-kept ones, and the rest of a non-normal block)."""
+
+    numbers: tuple[int, ...]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Tolerance:
+    """The smallest count in rank order whose error passes.
+
+    value: a ratio for ``peak`` and ``local``; for ``absolute`` a size in the outputs' ``unit``, for the sum over all
+    inputs at their amplitudes. unit: as given by the user, for messages.
+    """
+
+    value: float
+    of: Literal["peak", "local", "absolute"] = "local"
+    unit: str = ""
+
+
+Choice: TypeAlias = Count | Band | Keep | Tolerance | tuple[Above, ...]
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class ReducedModel:
+    """A small model, what it was cut from, and how wrong it is.
+
+    kept: mode numbers in ascending order (() when a file holds none). system: the small model with its statics.
+    error: the figure asked for by the choice, or the local error over the band; None when there was no band to
+    measure in. samples: the full response that `error` was measured on. choice: how the kept set was chosen.
+    """
+
+    modes: Modes
+    kept: tuple[int, ...]
+    system: SmallSystem
+    statics: Statics
+    choice: Any
+    ranked_by: str = ""
+    band: tuple[float, float] | None = None
+    error: ErrorFigure | None = None
+    samples: FullResponse | None = None
+    notes: tuple[str, ...] = ()
+    ranking: Ranking | None = field(default=None, repr=False)
+
+    @property
+    def states(self) -> int:
+        return self.system.states
+
+    def response(self, omega: Real) -> Any:
+        """``R(j w)``, shape (w, p, m), physical channel units."""
+        return self.system.response(omega)
