@@ -182,7 +182,8 @@ class FirstOrderModal:
                 adj[:, 0, 0], adj[:, 0, 1], adj[:, 1, 0], adj[:, 1, 1] = s - d, b, c, s - a
                 return (adj / det[:, None, None]) @ B
         Z = s[:, None, None] * np.eye(len(A)) - A
-        return np.linalg.solve(Z, np.broadcast_to(B.astype(complex), (len(s), *B.shape)))
+        out: Complex = np.linalg.solve(Z, np.broadcast_to(B.astype(complex), (len(s), *B.shape)))
+        return out
 
     def term_response(self, omega: Real, term: int) -> Complex:
         """Contribution of one term, shape (w, p, m)."""
