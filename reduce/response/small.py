@@ -70,11 +70,11 @@ class SecondOrderModal:
     def _viscous(self) -> Real:
         return self.d + self.eta * np.sqrt(np.maximum(self.x, 0.0))
 
+    @np.errstate(divide="ignore", invalid="ignore")
     def term_gain(self, omega: Real) -> Complex:
         """``h_i(j w)``, shape (w, k). Infinite where an undamped mode sits exactly on a frequency."""
         w = np.asarray(omega, dtype=float)[:, None]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            return 1.0 / (self.x * (1 + 1j * self.eta * np.sign(w)) + 1j * w * self.d - w**2)
+        return 1.0 / (self.x * (1 + 1j * self.eta * np.sign(w)) + 1j * w * self.d - w**2)
 
     def output_at(self, omega: Real) -> Complex:
         """``c_i(j w)``, shape (w, p, k)."""
@@ -86,11 +86,13 @@ class SecondOrderModal:
         w = np.asarray(omega, dtype=float)[:, None, None]
         return self.D + self.X / (1 + 1j * self.eta_X * np.sign(w))
 
+    @np.errstate(divide="ignore", invalid="ignore")
     def response(self, omega: Real) -> Complex:
-        """``G(j w)``, shape (w, p, m)."""
+        """``G(j w)``, shape (w, p, m); not finite where an undamped pole sits exactly on a frequency."""
         weighted = self.output_at(omega) * self.term_gain(omega)[:, None, :]
         return self.through(omega) + weighted @ self.b
 
+    @np.errstate(divide="ignore", invalid="ignore")
     def term_response(self, omega: Real, term: int) -> Complex:
         """Contribution of one term, shape (w, p, m)."""
         c = self.output_at(omega)[:, :, term] * self.term_gain(omega)[:, term, None]
@@ -168,36 +170,37 @@ class FirstOrderModal:
         """The part that belongs to no mode: D at every frequency, shape (w, p, m)."""
         return np.broadcast_to(self.D.astype(complex), (len(omega), *self.D.shape))
 
+    @np.errstate(divide="ignore", invalid="ignore")
     def resolvent(self, omega: Real, term: int) -> Complex:
         """``(j w I - A_i)^-1 B_i``, shape (w, r_i, m). Infinite at an eigenvalue on the axis."""
         A, B = self.blocks[term], self.B[self.states_of(term)]
         s = 1j * np.asarray(omega, dtype=float)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            if len(A) == 1:
-                return B[None] / (s - A[0, 0])[:, None, None]
-            if len(A) == 2:
-                (a, b), (c, d) = A
-                det = (s - a) * (s - d) - b * c
-                adj = np.empty((len(s), 2, 2), dtype=complex)
-                adj[:, 0, 0], adj[:, 0, 1], adj[:, 1, 0], adj[:, 1, 1] = s - d, b, c, s - a
-                return (adj / det[:, None, None]) @ B
+        if len(A) == 1:
+            return B[None] / (s - A[0, 0])[:, None, None]
+        if len(A) == 2:
+            (a, b), (c, d) = A
+            det = (s - a) * (s - d) - b * c
+            adj = np.empty((len(s), 2, 2), dtype=complex)
+            adj[:, 0, 0], adj[:, 0, 1], adj[:, 1, 0], adj[:, 1, 1] = s - d, b, c, s - a
+            return (adj / det[:, None, None]) @ B
         Z = s[:, None, None] * np.eye(len(A)) - A
-        out: Complex = np.linalg.solve(Z, np.broadcast_to(B.astype(complex), (len(s), *B.shape)))
-        return out
+        out = np.linalg.solve(Z, np.broadcast_to(B.astype(complex), (len(s), *B.shape)))
+        return np.asarray(out, dtype=np.complex128)
 
+    @np.errstate(divide="ignore", invalid="ignore")
     def term_response(self, omega: Real, term: int) -> Complex:
         """Contribution of one term, shape (w, p, m)."""
         return self.C[:, self.states_of(term)] @ self.resolvent(omega, term)
 
+    @np.errstate(divide="ignore", invalid="ignore")
     def response(self, omega: Real) -> Complex:
-        """``G(j w)``, shape (w, p, m)."""
+        """``G(j w)``, shape (w, p, m); not finite where an undamped pole sits exactly on a frequency."""
         single = np.array([len(a) == 1 for a in self.blocks], dtype=bool)
         rows = self.offsets[:-1][single]
         G = self.through(omega).copy()
         if rows.size:
             lam = np.array([self.blocks[i][0, 0] for i in np.flatnonzero(single)])
-            with np.errstate(divide="ignore", invalid="ignore"):
-                gain = 1.0 / (1j * np.asarray(omega, dtype=float)[:, None] - lam)
+            gain = 1.0 / (1j * np.asarray(omega, dtype=float)[:, None] - lam)
             G += (self.C[:, rows] * gain[:, None, :]) @ self.B[rows]
         for term in np.flatnonzero(~single):
             G += self.term_response(omega, int(term))
