@@ -1,0 +1,162 @@
+"""One self-contained page per run: the data, the words and the scripts put together."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from importlib.resources import files
+from typing import Any
+
+import numpy as np
+from jinja2 import Environment, select_autoescape
+from markupsafe import Markup
+
+from modesieve.io.page.payload import (
+    check_data,
+    encode,
+    figure_data,
+    mode_rows,
+    number,
+    packed,
+    shape_data,
+    system_data,
+    term_statics,
+    time_data,
+)
+from modesieve.reduce.comparison.records import Check, Comparison, Sweep
+from modesieve.reduce.modal.records import Modes, Ranking
+from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal
+
+
+@dataclass(frozen=True, kw_only=True)
+class Words:
+    """The texts of a page that are not in the data: verdict, cautions, assumptions, the commands to reproduce."""
+
+    title: str
+    headline: str
+    sentence: str
+    about: str
+    cautions: tuple[str, ...] = ()
+    facts: tuple[tuple[str, str], ...] = ()
+    commands: tuple[str, ...] = ()
+
+
+def page_text(comparison: Comparison, ranking: Ranking, words: Words, *, index: int = 0) -> str:
+    """The whole page as HTML, for the small model ``comparison.checks[index]``; `ranking` orders its modes.
+
+    Names of channels and titles come from files: they reach the page through JSON and text nodes only.
+    """
+    parts = files("modesieve.io.page")
+    script = {name: Markup(parts.joinpath(f"{name}.js").read_text("utf-8")) for name in SCRIPTS}
+    environment = Environment(autoescape=select_autoescape(default=True, default_for_string=True))
+    template = environment.from_string(parts.joinpath("page.html").read_text("utf-8"))
+    data = page_data(comparison, comparison.checks[index], ranking, words)
+    return template.render(
+        title=words.title,
+        css=Markup(parts.joinpath("page.css").read_text("utf-8")),
+        data=Markup(encode(data)),
+        plotly=Markup(_plotly()),
+        **script,
+    )
+
+
+SCRIPTS = ("numbers", "trial", "charts", "shapes", "page")
+
+
+def _plotly() -> str:
+    from plotly.offline import get_plotlyjs  # half a second to import: only when a page is written
+
+    return str(get_plotlyjs())
+
+
+def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Words) -> dict[str, Any]:
+    """Everything the scripts read, as plain JSON values and packed arrays."""
+    modes, small, full = comparison.modes, check.small, comparison.full
+    origin = modes.origin
+    scale = origin.weigh(np.ones((origin.p, origin.m)))
+    low, high = comparison.band
+    data = {
+        "kind": origin.kind,
+        "fingerprint": origin.fingerprint,
+        "inputs": [{"name": c.name, "unit": c.unit} for c in origin.inputs],
+        "outputs": [{"name": c.name, "unit": c.unit} for c in origin.outputs],
+        "amplitudes": origin.amplitudes.tolist(),
+        "scale": packed(scale),
+        "band": [low, high],
+        "in_band": [bool(low * (1 - 1e-12) <= w <= high * (1 + 1e-12)) for w in full.omega],
+        "threshold": comparison.threshold,
+        "reference_peak": comparison.reference_peak,
+        "omega": packed(full.omega),
+        "full": packed(full.G),
+        "system": system_data(modes.system),
+        "term_statics": packed(term_statics(modes.system)),
+        "statics_matrix": None if modes.static is None else packed(modes.static),
+        "eta_rest": getattr(small.system, "eta_X", 0.0),
+        "counted_to": modes.certificate.below_omega,
+        "modes": _rows_with_poles(modes, ranking),
+        "by": ranking.by,
+        "order": [int(n) for n in ranking.order],
+        "measure_names": list(ranking.measures),
+        "undefined": ranking.undefined,
+        "coupling": coupling(modes).tolist(),
+        "delivered": check_data(check),
+        "tolerance": _tolerance(small.choice),
+        "sweep": None if comparison.sweep is None else sweep_data(comparison.sweep),
+        "step": time_data(comparison.step),
+        "shapes": shape_data(modes),
+        "error": figure_data(small.error),
+        "verdict": {
+            "headline": words.headline,
+            "sentence": words.sentence,
+            "about": words.about,
+            "cautions": list(words.cautions),
+        },
+        "facts": [list(pair) for pair in words.facts],
+        "commands": list(words.commands),
+    }
+    return data
+
+
+def _rows_with_poles(modes: Modes, ranking: Ranking) -> list[dict[str, Any]]:
+    rows = mode_rows(modes, ranking)
+    for row, value in zip(rows, modes.eigenvalue, strict=True):
+        row["re"], row["im"] = number(value.real), number(value.imag)
+    return rows
+
+
+def coupling(modes: Modes) -> Any:
+    """Per mode the share of the largest coupling to every input and output, shape (k, m + p), weighted channels."""
+    system, origin = modes.system, modes.origin
+    to_inputs, to_outputs = np.zeros((system.terms, origin.m)), np.zeros((system.terms, origin.p))
+    for i in range(system.terms):
+        if isinstance(system, SecondOrderModal):
+            w = np.sqrt(max(system.x[i], 0.0))
+            to_inputs[i] = np.abs(system.b[i])
+            to_outputs[i] = np.abs(system.cq[:, i] + 1j * w * system.cv[:, i] - w**2 * system.ca[:, i])
+        elif isinstance(system, FirstOrderModal):
+            at = system.states_of(i)
+            to_inputs[i] = np.linalg.norm(system.B[at], axis=0)
+            to_outputs[i] = np.linalg.norm(system.C[:, at], axis=1)
+    table = np.hstack([to_inputs * origin.amplitudes, to_outputs / origin.resolutions])[modes.term]
+    top = table.max(axis=0, initial=0.0)
+    return table / np.where(top > 0, top, 1.0)
+
+
+def sweep_data(sweep: Sweep) -> dict[str, Any]:
+    """The sweep's local curves where there are any, else those of the peak."""
+    of = "local" if any(reference == "local" for _, reference in sweep.errors) else "peak"
+    curves = [
+        {
+            "name": statics,
+            "certainty": sweep.certainty,
+            "x": [int(k) for k in sweep.kept],
+            "y": [number(v) for v in values],
+        }
+        for (statics, reference), values in sweep.errors.items()
+        if reference == of
+    ]
+    return {"by": sweep.ranked_by, "of": of, "curves": curves}
+
+
+def _tolerance(choice: Any) -> dict[str, Any] | None:
+    of = getattr(choice, "of", None)
+    return None if of is None else {"value": choice.value, "of": of, "unit": choice.unit}
