@@ -1,0 +1,190 @@
+"""The hub: one reference model that knows how wrong it is, so that every small model can be held against it.
+
+The hub H is the Galerkin model of the full model G on all computed modes and a few tail levels. With the residuals
+``r = F - Z V z`` and ``r' = C^T - Z^T V z'`` of its primal and dual problems (free of the computed modes),
+
+    norm(G - H) <= q(w) norm(r)_{K_s^-1} norm(r')_{K_s^-1},   K_s = K - sigma M,
+    q(w) = sup over x >= x_c of (x - sigma)/abs(a x + b),
+
+and for any other model R, whatever it is made of, ``abs(norm(G - R) - norm(H - R)) <= norm(G - H)``. The spectral
+estimate of the residual product is the Cauchy-Schwarz step of a posteriori bounds for reduced linear systems (e.g.
+Antoulas, Approximation of Large-Scale Dynamical Systems, SIAM 2005); the supremum over the uncomputed part needs a
+complete list of modes below x_c (Sylvester's law of inertia).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from modesieve.reduce.arrays import Complex, Real, frozen
+from modesieve.reduce.model import BaseDamping
+from modesieve.reduce.response.small import SmallSystem
+from modesieve.reduce.truncation.diagonal import Diagonal, diagonal
+from modesieve.reduce.truncation.rest import Rest
+
+#: Frequencies treated at once: keeps the temporaries of wide systems small.
+_PIECE = 256
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Hub:
+    """All computed modes and the tail, with what its error bound needs.
+
+    system: the computed modes' terms first (`computed` of them), then the tail's. levels: tail levels it holds.
+    x_c: every eigenvalue below it is computed (rad^2/s^2 for structures, 1/s thermal; inf: all are). sigma: the shift.
+    load_rest (r, m), output_rest (3, r, p), tail_rest (r, t): residuals in an orthonormal basis of K_s^-1, for the
+    load, the three kinds of output and the tail vectors: ``r = load_rest - d(w) tail_rest z`` with d = a sigma + b.
+    amplitudes (m,), resolutions (p,): the weights of the largest singular value. relative_rounding: how much of the
+    model's size every bound is widened by. damping: the base damping, whose rule pseudo-modes of small models follow.
+    direct (p, m): the model's own feedthrough; massless (p, m): what massless unknowns answer, over a(w). solves:
+    right-hand sides it took.
+    """
+
+    system: SmallSystem
+    computed: int
+    levels: int
+    x_c: float
+    sigma: float
+    rest: Rest
+    load_rest: Real
+    output_rest: Real
+    tail_rest: Real
+    amplitudes: Real
+    resolutions: Real
+    direct: Real
+    massless: Real
+    relative_rounding: float = 1e-12
+    damping: BaseDamping = None
+    solves: int = 0
+
+    def __post_init__(self) -> None:
+        for name in ("load_rest", "output_rest", "tail_rest", "amplitudes", "resolutions", "direct", "massless"):
+            object.__setattr__(self, name, frozen(np.asarray(getattr(self, name), dtype=float)))
+
+    @property
+    def terms(self) -> Diagonal:
+        """The hub's terms as one list."""
+        return diagonal(self.system)
+
+    @property
+    def tail_x(self) -> Real:
+        """Eigenvalues of the tail's pseudo-modes, all at or above x_c."""
+        return self.terms.x[self.computed :]
+
+    def response(self, omega: Real) -> Complex:
+        """``H(j w)``, (w, p, m), physical units."""
+        return self.system.response(omega)
+
+    def weigh(self, G: Complex | Real) -> Complex | Real:
+        """Weighted entries ``G_kl amplitude_l / resolution_k``."""
+        return G * (self.amplitudes[None, :] / self.resolutions[:, None])
+
+    def residuals(self, omega: Real) -> tuple[Complex, Complex]:
+        """Residuals of every input (w, r, m) and every output (w, r, p) in the orthonormal basis of K_s^-1."""
+        w = np.asarray(omega, dtype=float)
+        tail = self.terms.select(np.arange(self.computed, self.terms.terms))
+        a, b = self.rest.coefficients(w)
+        d = (a * self.sigma + b)[:, None]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            gain = d / (a[:, None] * tail.x + b[:, None])
+            load = self.load_rest - (self.tail_rest * gain[:, None, :]) @ tail.b
+            C = tail.cq + 1j * w[:, None, None] * tail.cv - (w**2)[:, None, None] * tail.ca
+            q, v, ac = self.output_rest
+            free = q + 1j * w[:, None, None] * v - (w**2)[:, None, None] * ac
+            out = free - (self.tail_rest * gain[:, None, :]) @ np.swapaxes(C, 1, 2)
+        return load, out
+
+    def bound(self, omega: Real) -> tuple[Real, Real]:
+        """Bound of ``G - H``, rounding included: largest singular value, weighted (w,), and every entry (w, p, m)."""
+        pieces = [self._bound(part) for part in _pieces(np.asarray(omega, dtype=float))]
+        return np.concatenate([t for t, _ in pieces]), np.concatenate([e for _, e in pieces])
+
+    def error(self, omega: Real) -> Real:
+        """``e_H(w)`` of the largest singular value of the weighted error, rounding included, (w,)."""
+        return self.bound(omega)[0]
+
+    def entry_error(self, omega: Real) -> Real:
+        """``e_H(w)`` of every entry in physical units, rounding included, (w, p, m)."""
+        return self.bound(omega)[1]
+
+    def rounding(self, omega: Real) -> Real:
+        """What every entry's bound is widened by, (w, p, m): ``relative_rounding`` times the model's size there.
+
+        The size adds the terms' magnitudes without cancellation, ``sqrt(sum c_k^2 g) sqrt(sum b_l^2 g)`` with
+        ``g = abs(h) (1 + abs(x h) max(1, x/x_c))``: a term is as sensitive as it is close to its resonance, and high
+        pseudo-modes know their eigenvalue to ``eps x/x_c`` only.
+        """
+        w, terms = np.asarray(omega, dtype=float), self.terms
+        with np.errstate(divide="ignore", invalid="ignore"):
+            gain = np.abs(gains(terms, w))
+            gain = gain * (1 + np.abs(terms.x * gain) * np.maximum(1.0, terms.x / self.x_c))
+            wide = w[:, None, None]
+            C = np.abs(terms.cq) + np.abs(wide * terms.cv) + np.abs(wide**2 * terms.ca)
+            rows = np.sqrt(np.einsum("wpk,wk->wp", C**2, gain))
+            columns = np.sqrt(gain @ terms.b**2)
+            size = rows[:, :, None] * columns[:, None, :] + np.abs(terms.D) + np.abs(terms.X)
+        return self.relative_rounding * _no_nan(size)
+
+    def defect(self, omega: Real) -> Real:
+        """Magnitude of what the hub's constant parts miss of ``direct + massless/a(w)``, (w, p, m).
+
+        Zero unless massless unknowns answer with stiffness-proportional damping, which no constant can follow.
+        """
+        a, _ = self.rest.coefficients(omega)
+        return np.abs(self.direct + self.massless / a[:, None, None] - self.system.through(omega))
+
+    def _bound(self, omega: Real) -> tuple[Real, Real]:
+        load, out = self.residuals(omega)
+        q = self.rest.supremum(omega, self.x_c, self.sigma)
+        rounding = self.rounding(omega) + self.defect(omega)
+        with np.errstate(invalid="ignore", over="ignore"):
+            entry = q[:, None, None] * (_column_norms(out)[:, :, None] * _column_norms(load)[:, None, :])
+            total = q * largest(load * self.amplitudes) * largest(out / self.resolutions)
+        widened = np.sqrt(np.sum(self.weigh(rounding) ** 2, axis=(1, 2)))
+        return _no_nan(total) + widened, _no_nan(entry) + rounding
+
+
+def gains(terms: Diagonal, omega: Real) -> Complex:
+    """``h_i(j w)`` of every term, (w, k)."""
+    w = np.asarray(omega, dtype=float)[:, None]
+    if terms.order == 1:
+        return 1.0 / (1j * w + terms.x)
+    return 1.0 / (terms.x * (1 + 1j * terms.eta * np.sign(w)) + 1j * w * terms.d - w**2)
+
+
+def largest(G: Complex | Real) -> Real:
+    """Largest singular value of every matrix, (w, p, m) -> (w,); inf where an entry is not finite."""
+    if G.shape[1] == 0 or G.shape[2] == 0:
+        return np.zeros(len(G))
+    fine = np.all(np.isfinite(G), axis=(1, 2))
+    out = np.full(len(G), np.inf)
+    if min(G.shape[1:]) == 1:
+        out[fine] = np.sqrt(np.sum(np.abs(G[fine]) ** 2, axis=(1, 2)))
+    elif fine.any():
+        out[fine] = np.linalg.norm(_squarer(G[fine]), ord=2, axis=(1, 2))
+    return out
+
+
+def _squarer(G: Complex | Real) -> Complex | Real:
+    """The triangular factor of a tall (or transposed wide) stack: same singular values, less work for the SVD."""
+    rows, columns = G.shape[1:]
+    if rows > 2 * columns:
+        return np.asarray(np.linalg.qr(G, mode="r"))
+    if columns > 2 * rows:
+        return np.asarray(np.linalg.qr(np.swapaxes(G, 1, 2), mode="r"))
+    return G
+
+
+def _column_norms(R: Complex) -> Real:
+    return np.asarray(np.sqrt(np.sum(np.abs(R) ** 2, axis=1)))
+
+
+def _no_nan(values: Real) -> Real:
+    """A term that is exactly at a pole makes 0 * inf: the bound there is infinite, not undefined."""
+    return np.where(np.isnan(values), np.inf, values)
+
+
+def _pieces(omega: Real) -> list[Real]:
+    count = max(1, -(-len(omega) // _PIECE))
+    return np.array_split(omega, count)
