@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 import scipy.sparse as sp
+
 from modesieve.reduce.model import (
     BaseDamping,
     LossFactor,

@@ -12,6 +12,7 @@ from typing import Any, ClassVar, TypeAlias
 
 import numpy as np
 import scipy.sparse as sp
+
 from modesieve.reduce.arrays import Complex, Real, Sparse, as_csr, frozen
 from modesieve.reduce.errors import ModelError
 

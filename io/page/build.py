@@ -74,7 +74,7 @@ def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Wor
     origin = modes.origin
     scale = origin.weigh(np.ones((origin.p, origin.m)))
     low, high = comparison.band
-    data = {
+    return {
         "kind": origin.kind,
         "fingerprint": origin.fingerprint,
         "inputs": [{"name": c.name, "unit": c.unit} for c in origin.inputs],
@@ -113,7 +113,6 @@ def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Wor
         "facts": [list(pair) for pair in words.facts],
         "commands": list(words.commands),
     }
-    return data
 
 
 def _rows_with_poles(modes: Modes, ranking: Ranking) -> list[dict[str, Any]]:

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from modesieve.reduce.arrays import Real
-from modesieve.reduce.comparison.records import Check, Comparison, TimeResponse
+from modesieve.reduce.comparison.records import Check, TimeResponse
 from modesieve.reduce.modal.records import Modes, Ranking
 from modesieve.reduce.model import Structure, Unknowns
 from modesieve.reduce.response.records import ErrorFigure

@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 from typing import Any, Literal, TypeAlias
 
 import numpy as np
+
 from modesieve.reduce.arrays import Complex, Ints, Real, frozen
 from modesieve.reduce.model import Model, Origin
 from modesieve.reduce.response.small import SmallSystem

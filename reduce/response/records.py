@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import Literal, TypeAlias
 
 import numpy as np
+
 from modesieve.reduce.arrays import Complex, Real, frozen
 
 Certainty: TypeAlias = Literal["guaranteed", "measured", "estimated"]

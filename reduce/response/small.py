@@ -15,8 +15,9 @@ from functools import cached_property
 from typing import Any, TypeAlias
 
 import numpy as np
-from modesieve.reduce.arrays import Complex, Ints, Real, frozen
 from scipy.linalg import block_diag
+
+from modesieve.reduce.arrays import Complex, Ints, Real, frozen
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)

@@ -7,6 +7,7 @@ import pickle
 import numpy as np
 import pytest
 import scipy.sparse as sp
+
 from modesieve.reduce.arrays import as_csr, frozen
 from modesieve.reduce.errors import ModelError, ModesieveError
 from modesieve.reduce.fingerprint import describe_damping, fingerprint, origin_of

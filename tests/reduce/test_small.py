@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+
 from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal, SmallSystem
 
 OMEGA = np.array([-2.0, 0.0, 0.3, 1.7, 40.0])
