@@ -7,6 +7,7 @@ from typing import Any, Literal, TypeAlias
 
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.modal.records import Modes, Ranking
+from modesieve.reduce.report import aligned, number, runs, share, span
 from modesieve.reduce.response.records import ErrorFigure, FullResponse
 from modesieve.reduce.response.small import SmallSystem
 
@@ -59,7 +60,7 @@ class Tolerance:
 Choice: TypeAlias = Count | Band | Keep | Tolerance | tuple[Above, ...]
 
 
-@dataclass(frozen=True, kw_only=True, eq=False)
+@dataclass(frozen=True, kw_only=True, eq=False, repr=False)
 class ReducedModel:
     """A small model, what it was cut from, and how wrong it is.
 
@@ -87,3 +88,42 @@ class ReducedModel:
     def response(self, omega: Real) -> Any:
         """``R(j w)``, shape (w, p, m), physical channel units."""
         return self.system.response(omega)
+
+    def __repr__(self) -> str:
+        origin, kept = self.modes.origin, len(self.kept)
+        size = f"{self.states} states"
+        if kept:
+            size = f"{kept} of {len(self.modes)} computed modes ({runs(self.kept)}), {size}"
+        title = f"Reduced model of {origin.title or 'a model'} ({origin.kind}, {origin.n} unknowns)"
+        rows = [
+            ("kept", size),
+            ("chosen", describe_choice(self.choice)),
+            ("ranked by", self.ranked_by),
+            ("statics", self.statics),
+            ("band", span(self.band)),
+            ("error", str(self.error) if self.error is not None else "not measured"),
+        ]
+        return aligned(title, [*rows, *(("note", note) for note in self.notes)])
+
+
+def describe_choice(choice: Any) -> str:
+    """How the kept set was chosen, in words; "" for what is none of the typed choices.
+
+    >>> describe_choice(Tolerance(value=0.02)), describe_choice((Above(measure="decay", share=3.0),))
+    ('tolerance 2 % of local', 'above decay 3 s')
+    """
+    match choice:
+        case Count(modes=count):
+            return f"count {count}"
+        case Band():
+            return f"band {span((choice.low, choice.high))}"
+        case Keep():
+            return "keep list"
+        case Tolerance(of="absolute"):
+            return f"tolerance {number(choice.value)} {choice.unit}".rstrip()
+        case Tolerance():
+            return f"tolerance {share(choice.value)} of {choice.of}"
+        case tuple() if choice and all(isinstance(one, Above) for one in choice):
+            parts = [f"{a.measure} {number(a.share)}" + (" s" if a.measure == "decay" else "") for a in choice]
+            return "above " + " or ".join(parts)
+    return str(choice) if isinstance(choice, str) else ""
