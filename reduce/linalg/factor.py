@@ -1,0 +1,83 @@
+"""Sparse factorisations behind one small interface: factorise, solve blocks of right-hand sides, count signs.
+
+PARDISO (through pypardiso, where MKL can be installed) and SuperLU with nested dissection (pymetis) in symmetric mode.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any, Literal, Protocol, TypeAlias
+
+import numpy as np
+
+from modesieve.reduce.arrays import Ints, Sparse
+from modesieve.reduce.errors import SolveError
+
+Symmetry: TypeAlias = Literal["definite", "indefinite", "none"]
+SolverName: TypeAlias = Literal["auto", "superlu", "pardiso"]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Inertia:
+    """Numbers of negative, zero and positive eigenvalues of a symmetric matrix; reason says why not reliable."""
+
+    negative: int
+    zero: int
+    positive: int
+    reliable: bool = True
+    reason: str = ""
+
+
+class Factor(Protocol):
+    """A factorised matrix. ``solver`` names the method for reports; memory in bytes."""
+
+    solver: str
+    n: int
+    nonzeros: int
+    memory_bytes: int
+
+    def solve(self, B: Any) -> Any:
+        """Solution of ``A X = B`` for B (n,) or (n, k)."""
+
+    def inertia(self) -> Inertia:
+        """Signs of the pivots (Sylvester's law of inertia)."""
+
+    def release(self) -> None:
+        """Give the memory back; the factor cannot be used afterwards."""
+
+
+def factorise(
+    A: Sparse, *, symmetry: Symmetry = "none", solver: SolverName = "auto", groups: Ints | None = None
+) -> Factor:
+    """Factorise the square sparse matrix A (real or complex).
+
+    groups: for every row the number of its node, so that the ordering may work on the smaller graph of nodes.
+    Raises SolveError for a singular matrix or when the memory is foreseen not to suffice.
+    """
+    from modesieve.reduce.linalg.pardiso import PardisoFactor, pardiso_available
+    from modesieve.reduce.linalg.superlu import SuperLUFactor
+
+    chosen = choose(solver, pardiso_available())
+    if chosen == "pardiso":
+        return PardisoFactor(A, symmetry)
+    return SuperLUFactor(A, symmetry, groups)
+
+
+def choose(solver: SolverName, available: bool) -> Literal["superlu", "pardiso"]:
+    """The solver that will run. Raises SolveError when PARDISO is asked for and not installed."""
+    if solver == "pardiso" and not available:
+        raise SolveError(
+            "the PARDISO solver is not installed",
+            expected="the package pypardiso and MKL",
+            remedy="install the extra 'fast' (x86-64), or let the program choose: it uses SuperLU instead",
+        )
+    return "pardiso" if available and solver != "superlu" else "superlu"
+
+
+def residual_of(A: Sparse, factor: Factor, seed: int = 0) -> float:
+    """Relative backward error of one test solve, ``norm(b - A x) / (norm(A) norm(x) + norm(b))`` in the inf norm."""
+    rng = np.random.default_rng(seed)
+    b = A @ rng.standard_normal(A.shape[0])
+    x = factor.solve(b)
+    size = float(abs(A).sum(axis=1).max()) * float(np.abs(x).max()) + float(np.abs(b).max())
+    return float(np.abs(b - A @ x).max()) / size if size else 0.0
