@@ -6,6 +6,7 @@ from dataclasses import replace
 from typing import Any
 
 import numpy as np
+
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.modal.records import Modes
@@ -17,6 +18,8 @@ from modesieve.reduce.truncation.krylov import Shifted, Tail, deflation, residua
 from modesieve.reduce.truncation.pencil import Pencil, pencil_of
 from modesieve.reduce.truncation.rest import Rest, rest_of
 
+#: Reasons of the modal stage for modes whose response has no static part.
+FLOATING = ("rigid body", "integrating")
 #: mu = 1/x below this share of the largest counts as massless: its vector answers statically at every frequency.
 _MASSLESS = 1e-13
 
@@ -35,6 +38,7 @@ def build_hub(modes: Modes, levels: int = 3, *, shifted: Shifted | None = None) 
     amplitudes, resolutions = modes.origin.amplitudes, modes.origin.resolutions
     common: dict[str, Any] = {"computed": terms.terms, "x_c": x_c, "rest": rest}
     common |= {"amplitudes": amplitudes, "resolutions": resolutions, "damping": _base(model)}
+    common |= {"floating": np.array([reason in FLOATING for reason in modes.always_kept], dtype=bool)}
     common |= {"relative_rounding": rounding_limit(modes), "direct": _direct(model)}
     pencil = pencil_of(model)
     if np.isinf(x_c):

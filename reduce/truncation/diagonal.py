@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+
 from modesieve.reduce.arrays import Ints, Real
 from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal, SmallSystem
 

@@ -15,10 +15,14 @@ complete list of modes below x_c (Sylvester's law of inertia).
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
 
 import numpy as np
+
 from modesieve.reduce.arrays import Complex, Real, frozen
 from modesieve.reduce.model import BaseDamping
+from modesieve.reduce.response.norms import frobenius, largest_singular_value
 from modesieve.reduce.response.small import SmallSystem
 from modesieve.reduce.truncation.diagonal import Diagonal, diagonal
 from modesieve.reduce.truncation.rest import Rest
@@ -35,10 +39,11 @@ class Hub:
     x_c: every eigenvalue below it is computed (rad^2/s^2 for structures, 1/s thermal; inf: all are). sigma: the shift.
     load_rest (r, m), output_rest (3, r, p), tail_rest (r, t): residuals in an orthonormal basis of K_s^-1, for the
     load, the three kinds of output and the tail vectors: ``r = load_rest - d(w) tail_rest z`` with d = a sigma + b.
-    amplitudes (m,), resolutions (p,): the weights of the largest singular value. relative_rounding: how much of the
-    model's size every bound is widened by. damping: the base damping, whose rule pseudo-modes of small models follow.
-    direct (p, m): the model's own feedthrough; massless (p, m): what massless unknowns answer, over a(w). solves:
-    right-hand sides it took.
+    amplitudes (m,), resolutions (p,): the weights of the largest singular value. direct (p, m): the model's own
+    feedthrough; massless (p, m): what massless unknowns answer, over a(w). floating (k,): mask of the computed terms
+    that are rigid-body or integrating modes; every small model keeps them as they are, so they bring no rounding of
+    their own. relative_rounding: how much of the model's size every bound is widened by. damping: the base damping,
+    whose rule pseudo-modes of small models follow. solves: right-hand sides it took.
     """
 
     system: SmallSystem
@@ -54,6 +59,7 @@ class Hub:
     resolutions: Real
     direct: Real
     massless: Real
+    floating: Any = ()
     relative_rounding: float = 1e-12
     damping: BaseDamping = None
     solves: int = 0
@@ -62,7 +68,7 @@ class Hub:
         for name in ("load_rest", "output_rest", "tail_rest", "amplitudes", "resolutions", "direct", "massless"):
             object.__setattr__(self, name, frozen(np.asarray(getattr(self, name), dtype=float)))
 
-    @property
+    @cached_property
     def terms(self) -> Diagonal:
         """The hub's terms as one list."""
         return diagonal(self.system)
@@ -71,6 +77,16 @@ class Hub:
     def tail_x(self) -> Real:
         """Eigenvalues of the tail's pseudo-modes, all at or above x_c."""
         return self.terms.x[self.computed :]
+
+    @cached_property
+    def _loose(self) -> Any:
+        mask = np.zeros(self.terms.terms, dtype=bool)
+        mask[: len(self.floating)] = self.floating
+        return mask
+
+    def elastic(self) -> SmallSystem:
+        """The hub without rigid-body and integrating modes."""
+        return self.system.select(np.flatnonzero(~self._loose))
 
     def response(self, omega: Real) -> Complex:
         """``H(j w)``, (w, p, m), physical units."""
@@ -115,12 +131,16 @@ class Hub:
         ``g = abs(h) (1 + abs(x h) max(1, x/x_c))``: a term is as sensitive as it is close to its resonance, and high
         pseudo-modes know their eigenvalue to ``eps x/x_c`` only.
         """
-        w, terms = np.asarray(omega, dtype=float), self.terms
         with np.errstate(divide="ignore", invalid="ignore"):
-            gain = np.abs(gains(terms, w))
-            gain = gain * (1 + np.abs(terms.x * gain) * np.maximum(1.0, terms.x / self.x_c))
-            wide = w[:, None, None]
-            C = np.abs(terms.cq) + np.abs(wide * terms.cv) + np.abs(wide**2 * terms.ca)
+            gain = np.abs(gains(self.terms, omega))
+        return self.widening(gain, omega)
+
+    def widening(self, gain: Real, omega: Real) -> Real:
+        """`rounding` for gains ``abs(h_i)`` (w, k) and frequencies (w,) that may be suprema over intervals."""
+        terms, w = self.terms, np.asarray(omega, dtype=float)[:, None, None]
+        with np.errstate(invalid="ignore", over="ignore"):
+            gain = np.where(self._loose, 0.0, gain * (1 + np.abs(terms.x * gain) * np.maximum(1.0, terms.x / self.x_c)))
+            C = np.abs(terms.cq) + np.abs(w * terms.cv) + np.abs(w**2 * terms.ca)
             rows = np.sqrt(np.einsum("wpk,wk->wp", C**2, gain))
             columns = np.sqrt(gain @ terms.b**2)
             size = rows[:, :, None] * columns[:, None, :] + np.abs(terms.D) + np.abs(terms.X)
@@ -135,14 +155,18 @@ class Hub:
         return np.abs(self.direct + self.massless / a[:, None, None] - self.system.through(omega))
 
     def _bound(self, omega: Real) -> tuple[Real, Real]:
+        total, entry = self.galerkin(omega)
+        widening = self.rounding(omega) + self.defect(omega)
+        return total + frobenius(self.weigh(widening)), entry + widening
+
+    def galerkin(self, omega: Real) -> tuple[Real, Real]:
+        """The bound without rounding, for at most a few hundred frequencies: weighted (w,) and entries (w, p, m)."""
         load, out = self.residuals(omega)
         q = self.rest.supremum(omega, self.x_c, self.sigma)
-        rounding = self.rounding(omega) + self.defect(omega)
         with np.errstate(invalid="ignore", over="ignore"):
             entry = q[:, None, None] * (_column_norms(out)[:, :, None] * _column_norms(load)[:, None, :])
-            total = q * largest(load * self.amplitudes) * largest(out / self.resolutions)
-        widened = np.sqrt(np.sum(self.weigh(rounding) ** 2, axis=(1, 2)))
-        return _no_nan(total) + widened, _no_nan(entry) + rounding
+            total = q * largest_singular_value(load * self.amplitudes) * largest_singular_value(out / self.resolutions)
+        return _no_nan(total), _no_nan(entry)
 
 
 def gains(terms: Diagonal, omega: Real) -> Complex:
@@ -151,29 +175,6 @@ def gains(terms: Diagonal, omega: Real) -> Complex:
     if terms.order == 1:
         return 1.0 / (1j * w + terms.x)
     return 1.0 / (terms.x * (1 + 1j * terms.eta * np.sign(w)) + 1j * w * terms.d - w**2)
-
-
-def largest(G: Complex | Real) -> Real:
-    """Largest singular value of every matrix, (w, p, m) -> (w,); inf where an entry is not finite."""
-    if G.shape[1] == 0 or G.shape[2] == 0:
-        return np.zeros(len(G))
-    fine = np.all(np.isfinite(G), axis=(1, 2))
-    out = np.full(len(G), np.inf)
-    if min(G.shape[1:]) == 1:
-        out[fine] = np.sqrt(np.sum(np.abs(G[fine]) ** 2, axis=(1, 2)))
-    elif fine.any():
-        out[fine] = np.linalg.norm(_squarer(G[fine]), ord=2, axis=(1, 2))
-    return out
-
-
-def _squarer(G: Complex | Real) -> Complex | Real:
-    """The triangular factor of a tall (or transposed wide) stack: same singular values, less work for the SVD."""
-    rows, columns = G.shape[1:]
-    if rows > 2 * columns:
-        return np.asarray(np.linalg.qr(G, mode="r"))
-    if columns > 2 * rows:
-        return np.asarray(np.linalg.qr(np.swapaxes(G, 1, 2), mode="r"))
-    return G
 
 
 def _column_norms(R: Complex) -> Real:

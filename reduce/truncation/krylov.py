@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
+
 from modesieve.reduce.arrays import Real, Sparse
 from modesieve.reduce.errors import SolveError
 from modesieve.reduce.truncation.pencil import Pencil

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+
 from modesieve.reduce.arrays import Real, Sparse
 from modesieve.reduce.errors import ChoiceError, SolveError
 from modesieve.reduce.model import Model, Structure, Thermal

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
+
 from modesieve.reduce.arrays import Complex, Real
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.model import (

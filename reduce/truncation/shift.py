@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.model import Structure, Thermal

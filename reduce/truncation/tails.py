@@ -11,6 +11,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.response.small import SmallSystem

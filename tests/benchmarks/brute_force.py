@@ -6,11 +6,12 @@ its response is the sum over all modes, massless directions included.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import scipy.linalg as sl
 import scipy.sparse as sp
+
 from modesieve.reduce.fingerprint import origin_of
 from modesieve.reduce.modal.records import Certificate, Modes
 from modesieve.reduce.model import (
@@ -222,6 +223,34 @@ def modes_record(model, truth, computed, x_c):
         model=model,
         vectors=phi,
     )
+
+
+def without_mode(modes, index):
+    """The list with one mode taken out; its certificate still claims it."""
+    keep = np.delete(np.arange(len(modes)), index)
+    return replace(
+        modes,
+        system=modes.system.select(keep),
+        vectors=modes.vectors[:, keep],
+        eigenvalue=modes.eigenvalue[keep],
+        term=np.arange(len(keep)),
+        residual=modes.residual[keep],
+        condition=modes.condition[keep],
+        cluster=tuple(modes.cluster[i] for i in keep),
+        always_kept=tuple(modes.always_kept[i] for i in keep),
+    )
+
+
+def exact_solver(case):
+    """A full solution that never fails, from all modes."""
+    from modesieve.reduce.response.records import FullResponse
+
+    def solve(omega):
+        none = np.zeros(len(omega))
+        G = case.response(omega)
+        return FullResponse(omega=omega, G=G, backward_error=none, residual=none, method=("exact",) * len(omega))
+
+    return solve
 
 
 # ---- random models ---------------------------------------------------------------------------------------------------

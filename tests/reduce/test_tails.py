@@ -5,11 +5,12 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from brute_force import DenseShift, all_modes, modes_record, output_parts, random_case
+
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.model import Damping, ModalRatio, Rayleigh, Structure, Thermal
+from modesieve.reduce.response.norms import largest_singular_value as largest
 from modesieve.reduce.truncation.build import build_hub
 from modesieve.reduce.truncation.diagonal import diagonal
-from modesieve.reduce.truncation.hub import largest
 from modesieve.reduce.truncation.tails import with_tail_levels
 
 
