@@ -46,7 +46,8 @@ class Modes:
     vectors (n, k): right vectors (complex for pairs), scaled as `system` says; None when not stored. For a structure
     with proportional damping: the real M-orthonormal phi. left (n, k): left vectors where they differ.
     system: all modes in modal coordinates, ``D`` included (condensed massless unknowns too).
-    static: (p, m) ``C K^-1 F`` of the displacement (or only) outputs, without rigid-body and integrating modes; None
+    static: (p, m) static response of all modes, computed or not, of the displacement (or only) outputs: ``C K^-1 F``
+    without rigid-body and integrating modes, and without what `system` carries as D or X (massless unknowns). None
     with ``static_reason``. effective_mass (k, 3): squared participation for x, y, z, None when directions are unknown;
     total_mass (3,): r^T M r.
     """
