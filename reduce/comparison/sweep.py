@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from modesieve.reduce.arrays import Complex, Ints, Real
 from modesieve.reduce.comparison.records import Sweep
 from modesieve.reduce.modal.records import Modes, Ranking
+from modesieve.reduce.model import Interface
 from modesieve.reduce.response.deviation import Yardstick
 from modesieve.reduce.response.norms import worst_ratio
 from modesieve.reduce.response.records import Certainty
-from modesieve.reduce.response.small import FirstOrderModal
+from modesieve.reduce.response.small import FirstOrderModal, SmallSystem
 from modesieve.reduce.truncation.choice import sequence
 from modesieve.reduce.truncation.gauge import response
 from modesieve.reduce.truncation.statics import loss_factor, refusal, static_terms, terms_of
@@ -27,23 +30,23 @@ def sweep_of(modes: Modes, ranking: Ranking, yard: Yardstick, certainty: Certain
     """
     ordered = sequence(modes, ranking)
     counts = _counts(ordered.cuts[ordered.cuts > 0])
-    statics = ["none"] if refusal(modes) else ["none", "feedthrough"]
-    through = modes.system.select(np.zeros(0, dtype=int))
-    E = yard.G - yard.channels.weigh(response(through, yard.omega))
-    parts = static_terms(modes) if "feedthrough" in statics else None
+    bare = _weighted_terms(modes.system, yard.channels)
+    parts = None if refusal(modes) else static_terms(modes)
     X = None if parts is None else modes.static
-    errors: dict[tuple[str, str], list[float]] = {(s, of): [] for s in statics for of in ("peak", "local")}
+    legal = ["none"] if parts is None else ["none", "feedthrough"]
+    errors: dict[tuple[str, str], list[float]] = {(s, of): [] for s in legal for of in ("peak", "local")}
+    E = yard.G - yard.channels.weigh(modes.system.through(yard.omega))
     states: list[int] = []
     before = 0
     for count in counts:
         added = terms_of(modes, ordered.order[before:count])
-        fresh = modes.system.select(added)
-        E = E - yard.channels.weigh(response(fresh, yard.omega) - fresh.through(yard.omega))
+        fresh = bare.select(added)
+        E -= response(fresh, yard.omega)
         states.append(fresh.states + (states[-1] if states else 0))
         _note(errors, "none", E, yard)
         if parts is not None and X is not None:
             X = X - parts[added].sum(axis=0)
-            _note(errors, "feedthrough", E - yard.channels.weigh(_remainder(modes, X, yard.omega)), yard)
+            _note(errors, "feedthrough", E - _remainder(modes, yard.channels.weigh(X), yard.omega), yard)
         before = count
     return Sweep(
         kept=np.asarray(counts, dtype=float),
@@ -66,6 +69,16 @@ def _note(errors: dict[tuple[str, str], list[float]], statics: str, E: Complex, 
     errors[statics, "local"].append(worst_ratio(E, yard.scale("local"))[0])
 
 
-def _remainder(modes: Modes, X: Real, omega: Real) -> Complex:
-    eta = 0.0 if isinstance(modes.system, FirstOrderModal) else loss_factor(modes.system)
-    return X / (1 + 1j * eta * np.sign(omega))[:, None, None]
+def _weighted_terms(system: SmallSystem, channels: Interface) -> SmallSystem:
+    """The terms alone, without D and X, in weighted channels."""
+    a, r = channels.amplitudes, channels.resolutions[:, None]
+    nothing = np.zeros_like(system.D)
+    if isinstance(system, FirstOrderModal):
+        return replace(system, B=system.B * a, C=system.C / r, D=nothing)
+    rows = {name: getattr(system, name) / r for name in ("cq", "cv", "ca")}
+    return replace(system, b=system.b * a, D=nothing, X=nothing, **rows)
+
+
+def _remainder(modes: Modes, X: Real, omega: Real) -> Complex | Real:
+    eta = loss_factor(modes.system)
+    return X / (1 + 1j * eta * np.sign(omega))[:, None, None] if eta else X

@@ -33,11 +33,26 @@ def largest_singular_value(G: Any) -> Real:
 
 
 def _vector_norm(v: Any) -> Real:
-    size = np.abs(v)
-    top = size.max(axis=-1, initial=0.0, keepdims=True)
-    top = np.where((top > 0) & np.isfinite(top), top, 1.0)
-    norm = top[..., 0] * np.sqrt(((size / top) ** 2).sum(axis=-1))
-    return np.where(np.isnan(norm), np.inf, norm)
+    """Euclidean norm along the last axis; inf where a value is not finite."""
+    parts = np.ascontiguousarray(v)
+    parts = parts.view(np.float64) if np.iscomplexobj(parts) else parts.astype(np.float64, copy=False)
+    square = np.einsum("...i,...i->...", parts, parts)
+    # Squares that overflow or lose digits (and entries that are not finite) are formed again, scaled.
+    doubtful = ~((square > 1e-200) & (square < 1e200)) & ~np.all(parts == 0, axis=-1)
+    norm = np.sqrt(square)
+    if np.any(doubtful):
+        norm = np.array(norm)
+        norm[doubtful] = _scaled_norm(parts[doubtful])
+    return norm
+
+
+def _scaled_norm(v: Real) -> Real:
+    top = np.abs(v).max(axis=-1)
+    fine = np.isfinite(top)
+    unit = np.where(fine, top, 1.0)[:, None]
+    with np.errstate(invalid="ignore", over="ignore"):
+        norm = unit[:, 0] * np.sqrt(((v / unit) ** 2).sum(axis=-1))
+    return np.where(fine, norm, np.inf)
 
 
 def _largest(batch: Any) -> Real:
