@@ -17,6 +17,10 @@ from modesieve.reduce.arrays import Complex, Real, Sparse, as_csr, frozen
 from modesieve.reduce.errors import ModelError
 
 
+#: Load, outputs and feedthrough may be left out; the record then holds arrays of no columns or zeros, never None.
+_ABSENT: Any = None
+
+
 @dataclass(frozen=True, kw_only=True)
 class Input:
     """One input channel. ``amplitude`` is its typical size in ``unit``; None means not given (weight 1)."""
@@ -191,11 +195,11 @@ class Structure(_Common):
 
     K: Sparse
     M: Sparse
-    F: Real | None = None
+    F: Real = _ABSENT
     Cq: Real | None = None
     Cv: Real | None = None
     Ca: Real | None = None
-    Du: Real | None = None
+    Du: Real = _ABSENT
     damping: Damping = field(default_factory=Damping)
 
     kind: ClassVar[str] = "structure"
@@ -252,9 +256,9 @@ class Thermal(_Common):
 
     K: Sparse
     E: Sparse
-    F: Real | None = None
-    C: Real | None = None
-    D: Real | None = None
+    F: Real = _ABSENT
+    C: Real = _ABSENT
+    D: Real = _ABSENT
 
     kind: ClassVar[str] = "thermal"
 
@@ -284,9 +288,9 @@ class StateSpace(_Common):
 
     A: Any
     E: Any = None
-    B: Real | None = None
-    C: Real | None = None
-    D: Real | None = None
+    B: Real = _ABSENT
+    C: Real = _ABSENT
+    D: Real = _ABSENT
 
     kind: ClassVar[str] = "state space"
 
