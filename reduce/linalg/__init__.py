@@ -1,21 +1,21 @@
-"""Factorisations and eigenpairs of sparse pencils: the ground that every stage stands on."""
+"""Sparse linear algebra: factorisations, eigenpairs of symmetric pencils, and their count."""
 
-from modesieve.reduce.linalg.count import CountResult, count_below
-from modesieve.reduce.linalg.factor import Factor, Inertia, factorise
-from modesieve.reduce.linalg.pairs import SymmetricPairs, all_pairs, certified_pairs, lowest_pairs, residuals
-from modesieve.reduce.linalg.shift import Shifted, shift_and_factor
+from modesieve.reduce.linalg.certify import certified_pairs
+from modesieve.reduce.linalg.count import CountResult, count_below, gap_above
+from modesieve.reduce.linalg.factor import Factor, Inertia, Prediction, factorise, predict
+from modesieve.reduce.linalg.lanczos import SymmetricPairs, lowest_pairs, residuals
 
 __all__ = [
     "CountResult",
     "Factor",
     "Inertia",
-    "Shifted",
+    "Prediction",
     "SymmetricPairs",
-    "all_pairs",
     "certified_pairs",
     "count_below",
     "factorise",
+    "gap_above",
     "lowest_pairs",
+    "predict",
     "residuals",
-    "shift_and_factor",
 ]

@@ -28,6 +28,19 @@ class Inertia:
     reason: str = ""
 
 
+@dataclass(frozen=True, kw_only=True)
+class Prediction:
+    """What a factorisation will need. label: "from the solver's own analysis" or "estimate"; memory in bytes."""
+
+    solver: str
+    nonzeros: int
+    memory_bytes: int
+    free_bytes: int
+    label: str
+    fits: bool
+    reason: str = ""
+
+
 class Factor(Protocol):
     """A factorised matrix. ``solver`` names the method for reports; memory in bytes."""
 
@@ -37,7 +50,7 @@ class Factor(Protocol):
     memory_bytes: int
 
     def solve(self, B: Any) -> Any:
-        """Solution of ``A X = B`` for B (n,) or (n, k)."""
+        """Solution of ``A X = B`` for B (n,) or (n, k), real or complex."""
 
     def inertia(self) -> Inertia:
         """Signs of the pivots (Sylvester's law of inertia)."""
@@ -49,29 +62,53 @@ class Factor(Protocol):
 def factorise(
     A: Sparse, *, symmetry: Symmetry = "none", solver: SolverName = "auto", groups: Ints | None = None
 ) -> Factor:
-    """Factorise the square sparse matrix A (real or complex).
+    """Factorise the square sparse matrix A (n, n), real or complex.
 
-    groups: for every row the number of its node, so that the ordering may work on the smaller graph of nodes.
+    symmetry: "definite" (symmetric positive definite; refused if a pivot says otherwise and the solver can tell),
+    "indefinite" (symmetric, for complex A without conjugation) or "none".
+    groups (n,): the number of each row's node, so that the ordering may work on the smaller graph of nodes.
     Raises SolveError for a singular matrix or when the memory is foreseen not to suffice.
+
+    >>> import scipy.sparse as sp
+    >>> factor = factorise(sp.csr_array(np.diag([2.0, -4.0])), symmetry="indefinite", solver="superlu")
+    >>> factor.solve(np.array([2.0, 4.0])).tolist(), factor.inertia().negative
+    ([1.0, -1.0], 1)
     """
-    from modesieve.reduce.linalg.pardiso import PardisoFactor, pardiso_available
+    from modesieve.reduce.linalg.pardiso import PardisoFactor
     from modesieve.reduce.linalg.superlu import SuperLUFactor
 
-    chosen = choose(solver, pardiso_available())
-    if chosen == "pardiso":
+    if chosen(solver) == "pardiso":
         return PardisoFactor(A, symmetry)
     return SuperLUFactor(A, symmetry, groups)
 
 
-def choose(solver: SolverName, available: bool) -> Literal["superlu", "pardiso"]:
+def predict(
+    A: Sparse, *, symmetry: Symmetry = "none", solver: SolverName = "auto", groups: Ints | None = None
+) -> Prediction:
+    """Fill and memory that `factorise` would need, compared with what is free; nothing is factorised."""
+    from modesieve.reduce.linalg.pardiso import predict_pardiso
+    from modesieve.reduce.linalg.superlu import predict_superlu
+
+    if chosen(solver) == "pardiso":
+        return predict_pardiso(A, symmetry)
+    return predict_superlu(A, symmetry, groups)
+
+
+def chosen(solver: SolverName) -> Literal["superlu", "pardiso"]:
     """The solver that will run. Raises SolveError when PARDISO is asked for and not installed."""
-    if solver == "pardiso" and not available:
+    from modesieve.reduce.linalg.pardiso import pardiso_available
+
+    if solver == "superlu":
+        return "superlu"
+    if pardiso_available():
+        return "pardiso"
+    if solver == "pardiso":
         raise SolveError(
             "the PARDISO solver is not installed",
             expected="the package pypardiso and MKL",
             remedy="install the extra 'fast' (x86-64), or let the program choose: it uses SuperLU instead",
         )
-    return "pardiso" if available and solver != "superlu" else "superlu"
+    return "superlu"
 
 
 def residual_of(A: Sparse, factor: Factor, seed: int = 0) -> float:

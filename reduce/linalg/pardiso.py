@@ -1,4 +1,7 @@
-"""PARDISO through pypardiso's loaded library, called directly: the matrix is handed over once, not hashed per solve."""
+"""PARDISO inside MKL, called directly: the matrix is handed over once and never hashed again.
+
+pypardiso finds and loads the library; its own class hashes the matrix at every solve and takes real matrices only.
+"""
 
 from __future__ import annotations
 
@@ -12,9 +15,11 @@ import scipy.sparse as sp
 
 from modesieve.reduce.arrays import Sparse
 from modesieve.reduce.errors import SolveError
-from modesieve.reduce.linalg.factor import Inertia, Symmetry
+from modesieve.reduce.linalg.factor import Inertia, Prediction, Symmetry
+from modesieve.reduce.linalg.memory import free_bytes, in_words
 
 ANALYSE, FACTORISE, SOLVE, RELEASE = 11, 22, 33, -1
+NAME = "PARDISO (MKL)"
 MATRIX_TYPE = {
     ("definite", False): 2,
     ("indefinite", False): -2,
@@ -29,52 +34,96 @@ MEANING = {
     -3: "reordering failed",
     -4: "zero pivot: the matrix is singular, or not definite where it should be",
     -7: "diagonal matrix is singular",
+    -8: "32-bit integers overflow",
     -9: "not enough memory",
 }
 
 
 @cache
-def _library() -> Any:
-    """pypardiso's handle on the MKL library, None where it cannot be loaded."""
+def _pardiso() -> Any:
+    """The library's routine, None where it cannot be loaded."""
     try:
         from pypardiso import PyPardisoSolver
 
-        return PyPardisoSolver()
-    except (ImportError, OSError):
+        routine = PyPardisoSolver().libmkl["pardiso"]  # by item: an own object with own argument types
+    except (ImportError, OSError, AttributeError):
         return None
+    routine.argtypes = [ctypes.c_void_p] * 16
+    routine.restype = None
+    return routine
 
 
 def pardiso_available() -> bool:
     """True when pypardiso and MKL are installed."""
-    return _library() is not None
+    return _pardiso() is not None
 
 
 class PardisoFactor:
     """One factorised matrix inside MKL. Symmetric matrices hand over their upper triangle, diagonal always stored."""
 
     def __init__(self, A: Sparse, symmetry: Symmetry) -> None:
+        self._open(A, symmetry)
+        self._factorise()
+        if self.mtype == -2 and self.perturbed:
+            self._again_with_matching()
+
+    @classmethod
+    def analysed(cls, A: Sparse, symmetry: Symmetry) -> PardisoFactor:
+        """Ordering and symbolic factorisation only; for predictions."""
+        self = cls.__new__(cls)
+        self._open(A, symmetry)
+        return self
+
+    def _open(self, A: Sparse, symmetry: Symmetry) -> None:
         self.n = int(A.shape[0])
-        self._complex = np.issubdtype(A.dtype, np.complexfloating)
+        self.solver = NAME
+        self._complex = bool(np.issubdtype(A.dtype, np.complexfloating))
         self.mtype = MATRIX_TYPE[symmetry, self._complex]
-        self.solver = "PARDISO (MKL)"
         self._pt = np.zeros(64, dtype=np.int64)
         self._iparm = _parameters(symmetry)
-        self._A = _one_based(A, upper=self.mtype not in (11, 13))
+        self._A = _arrays(A, upper=self.mtype not in (11, 13))
         self._alive = True
+        self._analyse()
+
+    def _analyse(self) -> None:
         self._call(ANALYSE)
+        # the counts come back as signed 32-bit integers and may have wrapped once
+        self.nonzeros = int(np.uint32(self._iparm[17].view(np.uint32)))
+        self.memory_bytes = 1024 * int(max(self._iparm[14], int(self._iparm[15]) + int(self._iparm[16])))
+
+    def _factorise(self) -> None:
+        free = free_bytes()
+        if self.memory_bytes > free:
+            self.release()
+            raise SolveError(
+                "the factorisation would not fit into memory",
+                expected=f"about {in_words(self.memory_bytes)} (the solver's own analysis)",
+                got=f"{in_words(free)} free",
+                where=f"{self.n} unknowns, {NAME}",
+                remedy="use a machine with more memory, or a coarser model",
+            )
         self._call(FACTORISE)
-        self.nonzeros = int(self._iparm[17])
-        self.memory_bytes = 1024 * int(max(self._iparm[14], self._iparm[15] + self._iparm[16]))
         self.perturbed = int(self._iparm[13])
 
+    def _again_with_matching(self) -> None:
+        # Zero diagonals (multiplier rows): a symmetric weighted matching finds 2 x 2 pivots. Scaling and matching are
+        # congruences, so the signs still count. Not the default: it orders worse.
+        self._call(RELEASE)
+        self._pt[:] = 0
+        self._iparm = _parameters("indefinite")
+        self._iparm[10] = self._iparm[12] = 1
+        self._analyse()
+        self._factorise()
+
     def solve(self, B: Any) -> Any:
-        """Solution of ``A X = B``, shape of B kept."""
-        kind = np.complex128 if self._complex else np.float64
-        if not self._complex and np.iscomplexobj(B):
-            return self.solve(B.real) + 1j * self.solve(B.imag)
-        rhs = np.asfortranarray(B, dtype=kind)
+        """Solution of ``A X = B``, shape of B kept, columns contiguous."""
+        B = np.asarray(B)
+        if np.iscomplexobj(B) and not self._complex:
+            return _by_parts(self.solve, B)
+        rhs = np.asfortranarray(B, dtype=np.complex128 if self._complex else np.float64)
         X = np.zeros_like(rhs, order="F")
-        self._call(SOLVE, rhs, X)
+        if rhs.size:
+            self._call(SOLVE, rhs, X)
         if not np.isfinite(X.sum()):
             raise SolveError("the solver returned values that are not numbers", where=self.solver)
         return X
@@ -84,79 +133,105 @@ class PardisoFactor:
         if self.mtype == 2:
             return Inertia(negative=0, zero=0, positive=self.n)
         if self.mtype != -2:
-            return Inertia(negative=0, zero=0, positive=0, reliable=False, reason="not a symmetric factorisation")
+            return Inertia(negative=0, zero=0, positive=0, reliable=False, reason="not a real symmetric factorisation")
         positive, negative = int(self._iparm[21]), int(self._iparm[22])
-        reason = f"{self.perturbed} pivots were perturbed" if self.perturbed else ""
         zero = self.n - positive - negative
-        return Inertia(
-            negative=negative, zero=zero, positive=positive, reliable=not reason and zero == 0, reason=reason
-        )
+        reason = f"{self.perturbed} pivots were perturbed" if self.perturbed else ""
+        reason = reason or (f"{zero} pivots are zero" if zero else "")
+        return Inertia(negative=negative, zero=zero, positive=positive, reliable=not reason, reason=reason)
 
     def release(self) -> None:
         """Free MKL's memory."""
         if self._alive:
             self._alive = False
             self._call(RELEASE)
+            self._A = (self._A[0], self._A[1][:0], self._A[2][:0])
 
     def __del__(self) -> None:
         if getattr(self, "_alive", False) and not sys.is_finalizing():
             self.release()
 
     def _call(self, phase: int, B: Any = None, X: Any = None) -> None:
+        if phase == SOLVE and not self._alive:
+            raise SolveError("the factor was released", where=self.solver)
         indptr, indices, data = self._A
         columns = 1 if B is None or B.ndim == 1 else B.shape[1]
-        error, unused = ctypes.c_int32(0), np.zeros(1, dtype=np.int32)
-        integer = [ctypes.c_int32(v) for v in (1, 1, self.mtype, phase, self.n, columns, 0)]
-        maxfct, mnum, mtype, phase_, n, nrhs, message = map(ctypes.byref, integer)
-        int32, void = ctypes.POINTER(ctypes.c_int32), ctypes.c_void_p
-        _library()._mkl_pardiso(
-            self._pt.ctypes.data_as(ctypes.POINTER(ctypes.c_int64)), maxfct, mnum, mtype, phase_, n,
-            data.ctypes.data_as(void), indptr.ctypes.data_as(int32), indices.ctypes.data_as(int32),
-            unused.ctypes.data_as(int32), nrhs, self._iparm.ctypes.data_as(int32), message,
-            None if B is None else B.ctypes.data_as(void), None if X is None else X.ctypes.data_as(void),
-            ctypes.byref(error),
+        error = ctypes.c_int32(0)
+        integers = [ctypes.c_int32(v) for v in (1, 1, self.mtype, phase, self.n, columns, 0)]
+        maxfct, mnum, mtype, phase_, n, nrhs, silent = (ctypes.addressof(v) for v in integers)
+        unused = np.zeros(1)
+        b, x = (unused if V is None else V for V in (B, X))
+        _pardiso()(
+            self._pt.ctypes.data, maxfct, mnum, mtype, phase_, n, data.ctypes.data, indptr.ctypes.data,
+            indices.ctypes.data, unused.ctypes.data, nrhs, self._iparm.ctypes.data, silent,
+            b.ctypes.data, x.ctypes.data, ctypes.addressof(error),
         )  # fmt: skip
-        if error.value:
+        if error.value and phase != RELEASE:
+            if phase != SOLVE:
+                self.release()
             raise SolveError(
-                "the PARDISO factorisation failed",
+                "the PARDISO factorisation failed" if phase != SOLVE else "the PARDISO solve failed",
                 got=f"error {error.value}: {MEANING.get(error.value, 'see the MKL manual')}",
                 where=f"{self.n} unknowns",
             )
+
+
+def predict_pardiso(A: Sparse, symmetry: Symmetry) -> Prediction:
+    """PARDISO's own symbolic analysis of A."""
+    analysed = PardisoFactor.analysed(A, symmetry)
+    nonzeros, memory = analysed.nonzeros, analysed.memory_bytes
+    analysed.release()
+    free = free_bytes()
+    fits = memory <= free
+    reason = "" if fits else f"needs {in_words(memory)}, {in_words(free)} are free"
+    label = "from the solver's own analysis"
+    return Prediction(
+        solver=NAME, nonzeros=nonzeros, memory_bytes=memory, free_bytes=free, label=label, fits=fits, reason=reason
+    )
+
+
+def _by_parts(solve: Any, B: Any) -> Any:
+    """A complex right-hand side of a real matrix: real and imaginary part side by side in one real block."""
+    columns = B.reshape(len(B), -1)
+    k = columns.shape[1]
+    both = solve(np.concatenate([columns.real, columns.imag], axis=1))
+    return (both[:, :k] + 1j * both[:, k:]).reshape(B.shape)
 
 
 def _parameters(symmetry: Symmetry) -> Any:
     iparm = np.zeros(64, dtype=np.int32)
     iparm[0] = 1  # no defaults
     iparm[1] = 2  # nested dissection
-    iparm[9] = 13 if symmetry == "none" else 8  # pivot perturbation 10^-k
-    iparm[10] = iparm[12] = 1 if symmetry == "none" else 0  # scaling and matching: would change what the pivots count
+    iparm[9] = 13  # a pivot below 1e-13 of the matrix is perturbed (8, the default, gives up digits of stiff models)
+    iparm[10] = iparm[12] = 1 if symmetry == "none" else 0  # scaling and matching
     iparm[17] = -1  # report nonzeros
     iparm[20] = 1  # 1 x 1 and 2 x 2 pivots
-    iparm[23] = 0
+    iparm[34] = 1  # indices from 0
     return iparm
 
 
-def _one_based(A: Sparse, *, upper: bool) -> tuple[Any, Any, Any]:
-    A = sp.csr_array(A)
-    if upper:
-        A = _upper_with_diagonal(A)
-    A.sort_indices()
-    kind = np.complex128 if np.issubdtype(A.dtype, np.complexfloating) else np.float64
+def _arrays(A: Sparse, *, upper: bool) -> tuple[Any, Any, Any]:
+    A = _upper_with_diagonal(sp.csr_array(A)) if upper else _with_diagonal(sp.csr_array(A))
+    if not A.has_sorted_indices:
+        A = A.sorted_indices()
     if A.nnz >= 2**31 - 1:
         raise SolveError("the matrix is too large for 32-bit indices", got=f"{A.nnz} nonzeros")
-    return A.indptr.astype(np.int32) + 1, A.indices.astype(np.int32) + 1, np.ascontiguousarray(A.data, dtype=kind)
+    kind = np.complex128 if np.issubdtype(A.dtype, np.complexfloating) else np.float64
+    return A.indptr.astype(np.int32), A.indices.astype(np.int32), np.ascontiguousarray(A.data, dtype=kind)
 
 
 def _upper_with_diagonal(A: Sparse) -> Sparse:
-    """Upper triangle with every diagonal entry stored, zeros too (PARDISO refuses to miss one)."""
-    U = sp.triu(A, format="csr")
+    return _with_diagonal(sp.csr_array(sp.triu(A, format="csr")))
+
+
+def _with_diagonal(A: Sparse) -> Sparse:
+    """The same matrix with every diagonal entry stored, zeros too (PARDISO must not miss one)."""
+    rows = np.repeat(np.arange(A.shape[0]), np.diff(A.indptr))
     missing = np.ones(A.shape[0], dtype=bool)
-    rows = np.repeat(np.arange(A.shape[0]), np.diff(U.indptr))
-    missing[rows[rows == U.indices]] = False
+    missing[rows[rows == A.indices]] = False
     at = np.flatnonzero(missing)
     if at.size == 0:
-        return sp.csr_array(U)
-    coo = U.tocoo()
-    data = np.concatenate([coo.data, np.zeros(at.size, dtype=U.dtype)])
-    index = (np.concatenate([coo.row, at]), np.concatenate([coo.col, at]))
+        return A
+    data = np.concatenate([A.data, np.zeros(at.size, dtype=A.dtype)])
+    index = (np.concatenate([rows, at]), np.concatenate([A.indices, at]))
     return sp.csr_array(sp.coo_array((data, index), shape=A.shape))
