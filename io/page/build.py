@@ -22,9 +22,9 @@ from modesieve.io.page.payload import (
     term_statics,
     time_data,
 )
+from modesieve.reduce.comparison.readiness import couplings
 from modesieve.reduce.comparison.records import Check, Comparison, Sweep
 from modesieve.reduce.modal.records import Modes, Ranking
-from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -97,7 +97,7 @@ def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Wor
         "order": [int(n) for n in ranking.order],
         "measure_names": list(ranking.measures),
         "undefined": ranking.undefined,
-        "coupling": coupling(modes).tolist(),
+        "coupling": np.hstack(couplings(modes)).tolist(),
         "delivered": check_data(check),
         "tolerance": _tolerance(small.choice),
         "sweep": None if comparison.sweep is None else sweep_data(comparison.sweep),
@@ -120,24 +120,6 @@ def _rows_with_poles(modes: Modes, ranking: Ranking) -> list[dict[str, Any]]:
     for row, value in zip(rows, modes.eigenvalue, strict=True):
         row["re"], row["im"] = number(value.real), number(value.imag)
     return rows
-
-
-def coupling(modes: Modes) -> Any:
-    """Per mode the share of the largest coupling to every input and output, shape (k, m + p), weighted channels."""
-    system, origin = modes.system, modes.origin
-    to_inputs, to_outputs = np.zeros((system.terms, origin.m)), np.zeros((system.terms, origin.p))
-    for i in range(system.terms):
-        if isinstance(system, SecondOrderModal):
-            w = np.sqrt(max(system.x[i], 0.0))
-            to_inputs[i] = np.abs(system.b[i])
-            to_outputs[i] = np.abs(system.cq[:, i] + 1j * w * system.cv[:, i] - w**2 * system.ca[:, i])
-        elif isinstance(system, FirstOrderModal):
-            at = system.states_of(i)
-            to_inputs[i] = np.linalg.norm(system.B[at], axis=0)
-            to_outputs[i] = np.linalg.norm(system.C[:, at], axis=1)
-    table = np.hstack([to_inputs * origin.amplitudes, to_outputs / origin.resolutions])[modes.term]
-    top = table.max(axis=0, initial=0.0)
-    return table / np.where(top > 0, top, 1.0)
 
 
 def sweep_data(sweep: Sweep) -> dict[str, Any]:
