@@ -49,7 +49,7 @@ class Modes:
     static: (p, m) static response of all modes, computed or not, of the displacement (or only) outputs: ``C K^-1 F``
     without rigid-body and integrating modes, and without what `system` carries as D or X (massless unknowns). None
     with ``static_reason``. effective_mass (k, 3): squared participation for x, y, z, None when directions are unknown;
-    total_mass (3,): r^T M r.
+    total_mass (3,): r^T M r. uniform (states,): state of a thermal model at one degree everywhere, ``phi^T E 1``.
     """
 
     origin: Origin
@@ -68,6 +68,7 @@ class Modes:
     static_reason: str = ""
     effective_mass: Real | None = None
     total_mass: Real | None = None
+    uniform: Real | None = None
     warnings: tuple[str, ...] = ()
     solver: str = ""
     factorisations: int = 0

@@ -67,6 +67,7 @@ class ReducedModel:
     kept: mode numbers in ascending order (() when a file holds none). system: the small model with its statics.
     error: the figure asked for by the choice, or the local error over the band; None when there was no band to
     measure in. samples: the full response that `error` was measured on. choice: how the kept set was chosen.
+    uniform (states,): the state of a thermal model at one degree everywhere, None where it is not known.
     """
 
     modes: Modes
@@ -78,6 +79,7 @@ class ReducedModel:
     band: tuple[float, float] | None = None
     error: ErrorFigure | None = None
     samples: FullResponse | None = None
+    uniform: Real | None = None
     notes: tuple[str, ...] = ()
     ranking: Ranking | None = field(default=None, repr=False)
 
