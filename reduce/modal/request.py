@@ -1,47 +1,78 @@
-"""How far the modal stage has to go: a band, a count, or both."""
+"""What was asked for: a band, a count, or neither."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 
+import numpy as np
+
 from modesieve.reduce.errors import ChoiceError
 
-#: Modes are computed to this multiple of the band's top (common practice asks for 1.5 to 2).
+#: Modes are computed at least to this multiple of the band's top (common practice).
 MARGIN = 1.5
-#: Number of modes computed when neither a band nor a count is given and the model is too large to solve whole.
+#: Up to this many unknowns every mode is computed when neither a band nor a count is given.
+ALL_LIMIT = 1000
+#: Up to this many unknowns every mode is kept even if a band is given: nothing then has to be estimated.
+WHOLE_LIMIT = 300
+#: Modes of a large model when nothing is said.
 DEFAULT_COUNT = 20
 
 
 @dataclass(frozen=True, kw_only=True)
 class Request:
-    """band (low, high) in rad/s or None; count: at least so many modes, or None."""
+    """count: at least so many modes, None: by the edge; edge: ``MARGIN * high`` in rad/s (1/s thermal); both None: all.
 
-    band: tuple[float, float] | None = None
+    warning: what was assumed, "" if nothing.
+    """
+
     count: int | None = None
+    edge: float | None = None
+    warning: str = ""
 
-    def below(self, kind: str) -> float | None:
-        """Every mode below this must be found: omega^2 for structures, decay rate for thermal models."""
-        if self.band is None:
-            return None
-        top = MARGIN * self.band[1]
-        return top**2 if kind == "structure" else top
+    @property
+    def wants_all(self) -> bool:
+        return self.count is None and self.edge is None
 
 
-def make_request(band: tuple[float, float] | None, count: int | None, n: int) -> Request:
-    """A checked request. Raises ChoiceError for a band upside down, or more modes than unknowns."""
-    if band is not None and not 0 <= band[0] < band[1]:
-        raise ChoiceError(
-            "the band is upside down",
-            expected="low below high, both at least 0",
-            got=f"{band[0]:.6g} to {band[1]:.6g} rad/s",
-            remedy="swap the two ends",
-        )
+def request(band: tuple[float, float] | None, count: int | None, n: int) -> Request:
+    """The request on a model of n unknowns.
+
+    Raises ChoiceError for a band that is none, for counts below 1 or above n, and for both at once.
+    """
     if count is not None and not 1 <= count <= n:
         raise ChoiceError(
-            "more modes asked for than there can be" if count > n else "at least one mode must be asked for",
+            f"{count} modes cannot be computed",
             expected=f"1 to {n}, the number of unknowns",
             got=str(count),
+            remedy="ask for fewer modes" if count > n else "",
         )
-    if band is None and count is None:
-        count = min(DEFAULT_COUNT, n)
-    return Request(band=band, count=count)
+    edge = MARGIN * _top(band) if band is not None else None
+    if count is not None or edge is not None:
+        return Request(count=count, edge=edge)
+    if n <= ALL_LIMIT:
+        return Request()
+    warning = f"neither a band nor a count was given: the {DEFAULT_COUNT} lowest modes of {n} unknowns were computed"
+    return Request(count=DEFAULT_COUNT, warning=warning)
+
+
+def _top(band: tuple[float, float]) -> float:
+    low, high = float(band[0]), float(band[1])
+    if not (np.isfinite(low) and np.isfinite(high) and 0 <= low < high):
+        raise ChoiceError(
+            "the band is not one",
+            expected="0 <= low < high, both finite",
+            got=f"{low / (2 * np.pi):.6g} Hz to {high / (2 * np.pi):.6g} Hz",
+            remedy="give the lower end first",
+        )
+    return high
+
+
+def too_many(count: int, exist: int, why: str = "") -> ChoiceError:
+    """The refusal of more modes than a model has."""
+    return ChoiceError(
+        f"{count} modes do not exist",
+        expected=f"at most {exist}, the number of finite modes of this model",
+        got=str(count),
+        where=why,
+        remedy=f"ask for {exist} or fewer",
+    )

@@ -1,37 +1,74 @@
-"""The exact static response without rigid-body or integrating modes, independent of the shift."""
+"""The static response of all modes, ``C K^-1 F`` without rigid-body modes, from the factor that is at hand."""
 
 from __future__ import annotations
 
+from dataclasses import dataclass, field
+from typing import Any
+
 import numpy as np
 
-from modesieve.reduce.arrays import Real, Sparse
-from modesieve.reduce.modal.workspace import Workspace
+from modesieve.reduce.arrays import Ints, Real, Sparse
+from modesieve.reduce.linalg import Factor, SymmetricPairs
+from modesieve.reduce.linalg.factor import SolverName
+from modesieve.reduce.linalg.shift import at
 
 
-def elastic_solution(K: Sparse, M: Sparse, F: Real, zero: Real, workspace: Workspace) -> Real:
-    """``u`` (n, m) with ``K u = P F`` and no part in the zero modes, ``P F = F - M Z Z^T F``.
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Workspace:
+    """What the solve leaves for the later stages of the same run.
 
-    zero (n, z): M-orthonormal zero modes Z. With a shifted factor: ``u <- u + (K - sigma M)^-1 (P F - K u)``,
-    projected; the error shrinks by ``abs(sigma)/(x_1 - sigma)`` a step.
+    factor: the live factor of ``K - sigma M``; pairs: the solve's own result with its Krylov vectors.
     """
-    load = F - M @ (zero @ (zero.T @ F))
-    u = _without(workspace.solve(load), zero, M)
-    if workspace.sigma == 0 and zero.shape[1] == 0:
-        return u
-    best = np.inf
+
+    sigma: float
+    factor: Factor = field(repr=False)
+    pairs: SymmetricPairs = field(repr=False)
+
+    def solve(self, rhs: Any) -> Any:
+        """``(K - sigma M)^-1 rhs``."""
+        return self.factor.solve(np.ascontiguousarray(rhs))
+
+
+def workspace_of(K: Sparse, M: Sparse, pairs: SymmetricPairs, solver: SolverName, groups: Ints | None) -> Workspace:
+    """The solve's own factor, made again where it was given back."""
+    factor = pairs.factor
+    if factor is None:
+        factor = at(K, M, pairs.sigma, solver, groups).factor
+    return Workspace(sigma=pairs.sigma, factor=factor, pairs=pairs)
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Still:
+    """u (n, m): elastic static answer to the load, None with a reason; solves: right-hand sides used."""
+
+    u: Real | None
+    reason: str = ""
+    solves: int = 0
+
+
+def elastic_answer(K: Sparse, M: Sparse, F: Real, rigid: Real, workspace: Workspace) -> Still:
+    """``K^-1 P F``, shape (n, m), P taking out the rigid modes (n, r), M-orthonormal.
+
+    ``u <- u + (K - sigma M)^-1 (P F - K u)``, projected again each time: the error shrinks by
+    ``abs(sigma)/(x_1 - sigma)`` a step, x_1 the first elastic eigenvalue; with sigma = 0 it is one refined solve.
+    """
+    load = _without_loads(F, M, rigid)
+    u, last, solves = np.zeros_like(F), np.inf, 0
     for _ in range(60):
-        correction = _without(workspace.solve(_range(load - K @ u, zero, M)), zero, M)
-        size = float(np.linalg.norm(correction))
-        if not size < 0.9 * best or size <= 1e-15 * float(np.linalg.norm(u)):
+        du = workspace.solve(_without_loads(load - K @ u, M, rigid))
+        du = du - rigid @ (rigid.T @ (M @ du))
+        solves += F.shape[1]
+        u = u + du
+        size = np.linalg.norm(u, axis=0)
+        step = float(np.max(np.linalg.norm(du, axis=0) / np.where(size > 0, size, 1.0), initial=0.0))
+        if step < 1e-14 or (step < 1e-8 and step > 0.3 * last):
+            return Still(u=u, solves=solves)
+        if not np.isfinite(step):
             break
-        best = size
-        u = u + correction
-    return u
+        last = step
+    reason = f"the static solution did not converge from the shift {workspace.sigma:.3g}"
+    return Still(u=None, reason=reason, solves=solves)
 
 
-def _without(u: Real, zero: Real, M: Sparse) -> Real:
-    return u - zero @ (zero.T @ (M @ u)) if zero.shape[1] else u
-
-
-def _range(r: Real, zero: Real, M: Sparse) -> Real:
-    return r - M @ (zero @ (zero.T @ r)) if zero.shape[1] else r
+def _without_loads(R: Real, M: Sparse, rigid: Real) -> Real:
+    return np.asarray(R - M @ (rigid @ (rigid.T @ R)))

@@ -1,215 +1,263 @@
-"""Modes of symmetric pencils: structures with proportional damping, and thermal models."""
+"""Modes of symmetric pencils: structures whose damping leaves the real modes uncoupled, and thermal models.
+
+``K phi = x M phi``, ``phi^T M phi = I``; x = omega^2 for a structure, x = -lambda for a thermal model (M: its capacity).
+"""
 
 from __future__ import annotations
 
-from dataclasses import replace
+import time
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 
 from modesieve.reduce.arrays import Complex, Ints, Real, Sparse
 from modesieve.reduce.fingerprint import origin_of
-from modesieve.reduce.linalg import CountResult, SymmetricPairs, certified_pairs, residuals, shift_and_factor
+from modesieve.reduce.linalg import residuals
 from modesieve.reduce.linalg.factor import SolverName
-from modesieve.reduce.modal.damping import eigenvalues, modal_damping
-from modesieve.reduce.modal.kinds import always_kept, fewest_coupled, groups, rounding_of
-from modesieve.reduce.modal.massless import static_share
-from modesieve.reduce.modal.participation import effective_mass, rigid_translations
+from modesieve.reduce.modal import clusters
+from modesieve.reduce.modal.certified import find_pairs
+from modesieve.reduce.modal.condense import massless_answer
+from modesieve.reduce.modal.damping import eigenvalues, modal_damping, overdamped
+from modesieve.reduce.modal.effective import effective_masses
 from modesieve.reduce.modal.records import Certificate, Modes
 from modesieve.reduce.modal.request import Request
-from modesieve.reduce.modal.statics import elastic_solution
-from modesieve.reduce.modal.workspace import Workspace
-from modesieve.reduce.model import LossFactor, Structure, Thermal
-from modesieve.reduce.progress import Listener
+from modesieve.reduce.modal.rigid import Zeros, find_zeros
+from modesieve.reduce.modal.statics import Workspace, elastic_answer, workspace_of
+from modesieve.reduce.model import LossFactor, RatioByMode, Rayleigh, Structure, Thermal, Unknowns
+from modesieve.reduce.progress import Listener, tell
 from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal, SmallSystem
 
-#: More start vectors than this would make the first block needlessly wide.
-START_COLUMNS = 8
+#: Load columns that begin the Krylov space; more cost solves without bringing the spectrum's end nearer.
+_START = 16
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class _Shapes:
+    """Ascending x (k,), phi (n, k) after rotation, what is zero, and the groups (indices) of repeated x."""
+
+    x: Real
+    phi: Real
+    zeros: Zeros
+    groups: list[tuple[int, ...]]
 
 
 def symmetric_modes(
-    model: Structure | Thermal, request: Request, *, solver: SolverName, seed: int, progress: Listener
+    model: Structure | Thermal, wanted: Request, *, solver: SolverName, seed: int, progress: Listener
 ) -> Modes:
-    """Modes of ``K phi = x M phi`` with their count: x = omega^2 (structure) or the decay rate (thermal)."""
-    K, M = pencil(model)
-    assert model.F is not None
-    pairs, count = certified_pairs(
-        K,
-        M,
-        count=request.count,
-        below=request.below(model.kind),
-        solver=solver,
-        start=model.F[:, :START_COLUMNS],
-        groups=node_groups(model),
-        seed=seed,
-        progress=progress,
-    )
-    pairs = clean(K, pairs)
-    rounding = rounding_of(K, pairs.vectors)
-    reasons, warnings = always_kept(pairs.x, rounding, "rigid body" if isinstance(model, Structure) else "integrating")
-    zero = np.array([r not in ("", "unstable") for r in reasons], dtype=bool)
-    clusters = groups(np.where(zero, 0.0, pairs.x), np.where(zero, 0.0, rounding))
-    vectors = rotate(model, pairs.vectors, clusters)
-    pairs = replace(pairs, vectors=vectors, residuals=residuals(K, M, pairs.x, vectors))
-    workspace = keep_factor(K, M, pairs, solver)
-    return assemble(model, pairs, count, reasons, warnings, clusters, workspace)
-
-
-def pencil(model: Structure | Thermal) -> tuple[Sparse, Sparse]:
-    """(K, M) of a structure, (K, E) of a thermal model."""
-    return (model.K, model.M) if isinstance(model, Structure) else (model.K, model.E)
-
-
-def node_groups(model: Structure | Thermal) -> Ints | None:
-    """Node number per row where labels exist: the ordering then works on the smaller graph of nodes."""
-    if model.unknowns is None or not model.unknowns.node:
-        return None
-    _, index = np.unique(np.array(model.unknowns.node), return_inverse=True)
-    return index.astype(np.int64)
-
-
-def clean(K: Sparse, pairs: SymmetricPairs) -> SymmetricPairs:
-    """Rayleigh quotients: x to second order in the vectors' error (x of a zero mode becomes its own rounding)."""
-    x = np.einsum("ij,ij->j", pairs.vectors, K @ pairs.vectors)
-    order = np.argsort(x, kind="stable")
-    return replace(pairs, x=x[order], vectors=pairs.vectors[:, order], residuals=pairs.residuals[order])
-
-
-def keep_factor(K: Sparse, M: Sparse, pairs: SymmetricPairs, solver: SolverName) -> Workspace:
-    """The solve's own factor, or a new one after a dense solve."""
-    if pairs.factor is not None:
-        return Workspace(sigma=pairs.sigma, factor=pairs.factor, basis=pairs.basis)
-    positive = pairs.x[pairs.x > 0]
-    shifted = shift_and_factor(K, M, solver=solver, hint=float(positive[0]) if positive.size else None)
-    return Workspace(sigma=shifted.sigma, factor=shifted.factor)
-
-
-def rotate(model: Structure | Thermal, vectors: Real, clusters: list[list[int]]) -> Real:
-    """Vectors with every repeated eigenvalue's basis turned so that few of its members couple."""
-    out = np.array(vectors)
-    for group in clusters:
-        b, c = weighted_coupling(model, out[:, group])
-        U, _, _ = fewest_coupled(b, c)
-        out[:, group] = out[:, group] @ U
-    return out
-
-
-def weighted_coupling(model: Structure | Thermal, vectors: Real) -> tuple[Real, Real]:
-    """b (k, m) times amplitudes and every kind of c (3p or p, k) over resolutions."""
-    assert model.F is not None
-    kinds = [model.Cq, model.Cv, model.Ca] if isinstance(model, Structure) else [model.C]
-    c = [C @ vectors / model.resolutions[:, None] for C in kinds if C is not None]
-    stacked = np.vstack(c) if c else np.zeros((0, vectors.shape[1]))
-    return vectors.T @ model.F * model.amplitudes, stacked
-
-
-def assemble(
-    model: Structure | Thermal,
-    pairs: SymmetricPairs,
-    count: CountResult,
-    reasons: tuple[str, ...],
-    warnings: tuple[str, ...],
-    clusters: list[list[int]],
-    workspace: Workspace,
-) -> Modes:
-    """The record of stage 1."""
-    K, M = pencil(model)
-    zero = np.array([r not in ("", "unstable") for r in reasons], dtype=bool)
-    x = np.where(zero, 0.0, pairs.x)
-    values, system = _system(model, x, pairs.vectors, clusters)
-    labels: list[tuple[int, ...]] = [()] * len(x)
-    for group in clusters:
-        for i in group:
-            labels[i] = tuple(j + 1 for j in group)
-    extra: dict[str, Any] = {}
-    if isinstance(model, Structure):
-        r = rigid_translations(model)
-        if r is not None:
-            extra["effective_mass"], extra["total_mass"] = effective_mass(M, pairs.vectors, r)
-    static, why = _static(model, K, M, pairs.vectors[:, zero], workspace, "unstable" in reasons)
-    return Modes(
-        origin=origin_of(model),
-        model=model,
-        system=system,
-        eigenvalue=values,
-        term=np.arange(len(x)),
-        residual=pairs.residuals,
-        condition=np.ones(len(x)),
-        cluster=tuple(labels),
-        always_kept=reasons,
-        certificate=certificate(model, pairs, count),
-        vectors=pairs.vectors,
+    """Modes of a structure without local damping or of a thermal model."""
+    began = time.perf_counter()
+    K, M = model.K, mass_of(model)
+    edge_x = None if wanted.edge is None else wanted.edge ** (2 if isinstance(model, Structure) else 1)
+    start = np.asarray(model.F)[:, :_START] if model.m else None
+    groups = node_groups(model.unknowns)
+    result = find_pairs(K, M, wanted, edge_x, start=start, groups=groups, solver=solver, seed=seed, progress=progress)
+    pairs = result.pairs
+    shapes = _shapes(model, pairs.x, pairs.vectors)
+    massless = massless_answer(model, solver=solver)
+    workspace = workspace_of(K, M, pairs, solver, groups)
+    tell(progress, "statics")
+    static, reason, solves = _static(model, shapes, massless, workspace)
+    modes = _assemble(model, shapes, massless, _in_omega(model, result.certificate))
+    return replace(
+        modes,
         static=static,
-        static_reason=why,
-        warnings=warnings + ((pairs.message,) if pairs.message else ()),
-        solver=pairs.solver,
-        factorisations=pairs.factorisations,
-        solves=pairs.solves,
-        seconds=pairs.seconds,
+        static_reason=reason,
+        warnings=tuple(text for text in (wanted.warning, pairs.message, *modes.warnings) if text),
         workspace=workspace,
-        **extra,
+        solver=f"{'dense' if pairs.basis is None else 'block Lanczos'}, {workspace.factor.solver}",
+        factorisations=pairs.factorisations + int(np.isfinite(result.certificate.below_omega or np.inf)),
+        solves=pairs.solves + solves,
+        seconds=time.perf_counter() - began,
     )
 
 
-def certificate(model: Structure | Thermal, pairs: SymmetricPairs, count: CountResult) -> Certificate:
-    """Complete when the count at the counting point equals the length of the list."""
-    mu = np.sqrt(count.mu) if isinstance(model, Structure) and count.mu > 0 else count.mu
-    common: dict[str, Any] = {"found": len(pairs.x), "shift": pairs.sigma, "solver": count.solver or pairs.solver}
-    if pairs.whole and count.reliable and count.expected == len(pairs.x):
-        return Certificate(complete="all", expected=count.expected, reason="every finite mode is known", **common)
-    common |= {"expected": count.expected, "negative_pivots": count.negative_pivots}
-    if not count.reliable:
-        return Certificate(complete="no", reason=f"the count could not be trusted: {count.reason}", **common)
-    if count.expected != len(pairs.x):
-        point = f"{mu / (2 * np.pi):.6g} Hz" if isinstance(model, Structure) else f"{mu:.6g} 1/s"
-        reason = f"{count.expected} modes lie below {point} by the count, {len(pairs.x)} were found"
-        return Certificate(complete="no", reason=reason, **common)
-    reason = "negative pivots of K - mu M" + (f", {count.corrections}" if count.corrections else "")
-    return Certificate(complete="counted", below_omega=float(mu), reason=reason, **common)
+def mass_of(model: Structure | Thermal) -> Sparse:
+    """M of a structure, the capacity of a thermal model."""
+    return model.M if isinstance(model, Structure) else model.E
 
 
-def _system(
-    model: Structure | Thermal, x: Real, vectors: Real, clusters: list[list[int]]
-) -> tuple[Complex, SmallSystem]:
-    assert model.F is not None
-    b = vectors.T @ model.F
-    share = static_share(model)
+def node_groups(unknowns: Unknowns | None) -> Ints | None:
+    """For every row the number of its node; None without labels."""
+    if unknowns is None or not unknowns.node:
+        return None
+    return np.asarray(np.unique(np.asarray(unknowns.node), return_inverse=True)[1], dtype=np.int64)
+
+
+# ---- shapes --------------------------------------------------------------------------------------------------------
+
+
+def _shapes(model: Structure | Thermal, x: Real, phi: Real) -> _Shapes:
+    zeros = find_zeros(model, x, phi)
+    x = np.where(zeros.zero, 0.0, x)
+    order = np.argsort(x, kind="stable")
+    x, phi = x[order], phi[:, order]
+    zeros = replace(zeros, zero=zeros.zero[order], reasons=tuple(zeros.reasons[i] for i in order))
+    error = clusters.eigenvalue_error(model.K, x, phi)
+    repeated = clusters.groups(x, error)
+    x, phi = x.copy(), phi.copy()
+    for group in repeated:
+        _rotate(model, x, phi, np.array(group))
+    return _Shapes(x=x, phi=clusters.fixed_signs(phi), zeros=zeros, groups=repeated)
+
+
+def _rotate(model: Structure | Thermal, x: Real, phi: Real, at: Ints) -> None:
+    """Turn the group's columns of phi in place, x to their Rayleigh quotients."""
+    if not (model.m and model.p):
+        return
+    B = phi[:, at].T @ (model.F * model.amplitudes)
+    C = _outputs(model, float(np.sqrt(np.abs(x[at]).max()))) @ phi[:, at]
+    Q = clusters.rotation(B, C)
+    phi[:, at] = phi[:, at] @ Q
+    x[at] = np.einsum("ij,i,ij->j", Q, x[at], Q)
+
+
+def _outputs(model: Structure | Thermal, omega: float) -> Real:
+    """All weighted output rows, the three kinds stacked and scaled to the group's own frequency."""
     if isinstance(model, Thermal):
-        assert model.C is not None
-        b, (c,) = _clean_clusters(b, [model.C @ vectors], clusters)
-        blocks = tuple(np.array([[-value]]) for value in x)
-        return (-x).astype(complex), FirstOrderModal(blocks=blocks, B=b, C=c, D=model.D + share)
-    empty = np.zeros((model.p, len(x)))
-    c = [empty if C is None else C @ vectors for C in (model.Cq, model.Cv, model.Ca)]
-    b, (cq, cv, ca) = _clean_clusters(b, c, clusters)
-    d, eta = modal_damping(model.damping.base, x, x > 0)
-    base = model.damping.base
-    loss = base.eta if isinstance(base, LossFactor) else 0.0
-    D, X = (model.Du, share) if loss else (model.Du + share, np.zeros_like(share))
-    system = SecondOrderModal(x=x, d=d, eta=eta, b=b, cq=cq, cv=cv, ca=ca, D=D, X=X, eta_X=loss)
-    return eigenvalues(x, d, eta), system
+        rows = [np.asarray(model.C)]
+    else:
+        kinds = ((model.Cq, 1.0), (model.Cv, omega), (model.Ca, omega**2))
+        rows = [np.asarray(C) * (factor or 1.0) for C, factor in kinds if C is not None]
+    return np.vstack([C / model.resolutions[:, None] for C in rows])
 
 
-def _clean_clusters(b: Real, c: list[Real], clusters: list[list[int]]) -> tuple[Real, list[Real]]:
-    """Couplings that the rotation made zero are zero to the last digit."""
-    b, c = b.copy(), [ci.copy() for ci in c]
-    for group in clusters:
-        for array in (b.T, *c):
-            part = array[:, group]
-            size = np.abs(part).max(initial=0.0)
-            part[:, np.abs(part).max(axis=0, initial=0.0) <= 1e-9 * size] = 0.0
-            array[:, group] = part
-    return b, c
+# ---- statics -------------------------------------------------------------------------------------------------------
 
 
 def _static(
-    model: Structure | Thermal, K: Sparse, M: Sparse, zero: Real, workspace: Workspace, unstable: bool
-) -> tuple[Real | None, str]:
-    if unstable and workspace.sigma != 0:
-        return None, "the static response of a model with unstable modes was not computed"
-    C = model.Cq if isinstance(model, Structure) else model.C
-    assert model.F is not None
-    if C is None:
-        return np.zeros((model.p, model.m)), ""
-    u = elastic_solution(K, M, model.F, zero, workspace)
-    return np.asarray(C @ u) - static_share(model), ""
+    model: Structure | Thermal, shapes: _Shapes, massless: Real, workspace: Workspace
+) -> tuple[Real | None, str, int]:
+    outputs = model.Cq if isinstance(model, Structure) else model.C
+    if outputs is None:
+        return None, "only displacement outputs have a static remainder, and the model has none", 0
+    rigid = shapes.phi[:, np.asarray(shapes.zeros.zero, dtype=bool)]
+    answer = elastic_answer(model.K, mass_of(model), np.asarray(model.F), rigid, workspace)
+    if answer.u is None:
+        return None, answer.reason, answer.solves
+    return np.asarray(outputs @ answer.u) - massless, "", answer.solves
+
+
+# ---- the record ----------------------------------------------------------------------------------------------------
+
+
+def _assemble(model: Structure | Thermal, shapes: _Shapes, massless: Real, certificate: Certificate) -> Modes:
+    x, phi, rigid = shapes.x, shapes.phi, shapes.zeros.zero
+    warnings = [*shapes.zeros.warnings]
+    if isinstance(model, Thermal):
+        system, value = _first_order(model, x, phi, massless), -x + 0j
+        masses, total = None, None
+    else:
+        d, eta = modal_damping(model.damping.base, x, rigid)
+        d = _common_in_groups(d, shapes.groups)
+        system, value = _second_order(model, x, d, eta, phi, massless), eigenvalues(x, d, eta)
+        masses, total = effective_masses(model, phi)
+        warnings += _structure_warnings(model, x, d, eta, massless, shapes.groups)
+    modes = Modes(
+        origin=origin_of(model),
+        system=system,
+        eigenvalue=value,
+        term=np.arange(len(x)),
+        residual=residuals(model.K, mass_of(model), x, phi),
+        condition=np.ones(len(x)),
+        cluster=_numbers(shapes.groups, len(x)),
+        always_kept=shapes.zeros.reasons,
+        certificate=certificate,
+        model=model,
+        vectors=phi,
+        effective_mass=masses,
+        total_mass=total,
+        warnings=tuple(warnings),
+    )
+    return in_order(modes)
+
+
+def _first_order(model: Thermal, x: Real, phi: Real, massless: Real) -> FirstOrderModal:
+    blocks = tuple(np.array([[-xi]]) for xi in x)
+    return FirstOrderModal(blocks=blocks, B=phi.T @ model.F, C=model.C @ phi, D=model.D + massless)
+
+
+def _second_order(model: Structure, x: Real, d: Real, eta: Real, phi: Real, massless: Real) -> SecondOrderModal:
+    none = np.zeros((model.p, len(x)))
+    cq, cv, ca = (none if C is None else np.asarray(C @ phi) for C in (model.Cq, model.Cv, model.Ca))
+    loss = model.damping.base.eta if isinstance(model.damping.base, LossFactor) else 0.0
+    return SecondOrderModal(
+        x=x,
+        d=d,
+        eta=eta,
+        b=phi.T @ model.F,
+        cq=cq,
+        cv=cv,
+        ca=ca,
+        # With a loss factor the massless unknowns answer with the same complex stiffness as everything else.
+        D=model.Du if loss else model.Du + massless,
+        X=massless if loss else np.zeros_like(massless),
+        eta_X=loss,
+    )
+
+
+def _common_in_groups(d: Real, groups: list[tuple[int, ...]]) -> Real:
+    """One damping for all members of a group: ratios by mode number would depend on the basis otherwise."""
+    d = np.array(d)
+    for group in groups:
+        d[list(group)] = d[list(group)].mean()
+    return d
+
+
+def _structure_warnings(
+    model: Structure, x: Real, d: Real, eta: Real, massless: Real, groups: list[tuple[int, ...]]
+) -> list[str]:
+    base, out = model.damping.base, []
+    slow = np.flatnonzero(overdamped(x, d, eta))
+    if slow.size:
+        listed = ", ".join(str(i + 1) for i in slow[:5]) + (" ..." if slow.size > 5 else "")
+        out.append(
+            f"{slow.size} overdamped mode{'s' * (slow.size > 1)} ({listed} by undamped frequency): two real poles each, "
+            "the table shows the slower one"
+        )
+    if isinstance(base, RatioByMode) and any(len(set(np.minimum(g, len(base.ratio) - 1))) > 1 for g in groups):
+        out.append("damping ratios by mode number differ inside a repeated mode: its members share their mean")
+    if isinstance(base, Rayleigh) and base.beta and np.any(massless):
+        out.append(
+            "massless unknowns answer a load at once here; with stiffness-proportional damping they would follow with "
+            f"a time constant of {base.beta:.3g} s"
+        )
+    return out
+
+
+def _numbers(groups: list[tuple[int, ...]], k: int) -> tuple[tuple[int, ...], ...]:
+    out: list[tuple[int, ...]] = [()] * k
+    for group in groups:
+        for i in group:
+            out[i] = tuple(j + 1 for j in group)
+    return tuple(out)
+
+
+def _in_omega(model: Structure | Thermal, certificate: Certificate) -> Certificate:
+    """The counting point as a frequency."""
+    if certificate.below_omega is None or isinstance(model, Thermal):
+        return certificate
+    return replace(certificate, below_omega=float(np.sqrt(max(certificate.below_omega, 0.0))))
+
+
+def in_order(modes: Modes) -> Modes:
+    """The same modes in ascending ``abs(eigenvalue)``, each keeping a term of its own."""
+    size: Any = np.abs(modes.eigenvalue)
+    order = np.argsort(size, kind="stable")
+    if np.array_equal(order, np.arange(len(order))):
+        return modes
+    place = np.empty(len(order), dtype=int)
+    place[order] = np.arange(len(order)) + 1
+    value: Complex = modes.eigenvalue[order]
+    system: SmallSystem = modes.system.select(order)
+    moved = {name: getattr(modes, name)[order] for name in ("residual", "condition")}
+    return replace(
+        modes,
+        system=system,
+        eigenvalue=value,
+        cluster=tuple(tuple(sorted(int(place[j - 1]) for j in modes.cluster[i])) for i in order),
+        always_kept=tuple(modes.always_kept[i] for i in order),
+        vectors=modes.vectors[:, order],
+        effective_mass=None if modes.effective_mass is None else modes.effective_mass[order],
+        **moved,
+    )
