@@ -234,6 +234,8 @@ def _full(
     notes = [_ZERO] if setting.band[0] == 0 and has_integrators(setting.modes) else []
     full = _solved(setting, wanted, smalls)
     yard = yardstick_for(setting.modes, full, setting.band)
+    if yard.refusal:
+        return full, notes
     extra = [worse_between(setting.modes, yard, small.system, "local", most=8) for small in smalls]
     more = np.setdiff1d(np.concatenate([np.zeros(0), *extra]), full.omega)
     return (joined([full, setting.solve(more)]) if more.size else full), notes

@@ -124,19 +124,17 @@ def _merged(points: Real, band: tuple[float, float], undamped: Real, no_zero: bo
         points = points[points > 0]
     apart = np.concatenate([[True], np.diff(points) > 1e-9 * points[1:]])
     points = points[apart]
-    return np.asarray(_clear(points, undamped), dtype=float)
+    return np.asarray(points[clear_of(points, undamped)], dtype=float)
 
 
-def _clear(points: Real, undamped: Real) -> Real:
-    """``points`` without those that sit on an undamped resonance."""
-    if undamped.size == 0:
-        return points
+def clear_of(points: Real, undamped: Real) -> Any:
+    """Mask of the ``points`` that do not sit on an undamped resonance."""
     near = np.sort(undamped)
-    at = np.clip(np.searchsorted(near, points), 1, max(len(near) - 1, 1))
-    distance = np.minimum(
-        np.abs(points - near[np.minimum(at, len(near) - 1)]), np.abs(points - near[np.maximum(at - 1, 0)])
-    )
-    return points[distance > _CLEARANCE * points]
+    if near.size == 0:
+        return np.ones(len(points), dtype=bool)
+    at = np.searchsorted(near, points)
+    above, below = near[np.minimum(at, len(near) - 1)], near[np.maximum(at - 1, 0)]
+    return np.minimum(np.abs(points - above), np.abs(points - below)) > _CLEARANCE * points
 
 
 def densified(omega: Real, factor: int) -> Real:

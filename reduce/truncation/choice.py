@@ -172,7 +172,8 @@ def _first(count: int, ordered: Sequence) -> Kept:
     if legal == count:
         return Kept(numbers=ordered.kept(count))
     split = ordered.order[legal : ordered.cuts[np.searchsorted(ordered.cuts, legal) + 1]]
-    note = f"kept {legal} modes, not {count}: modes {runs(split)} belong together and would have been split"
+    few = f"{legal} mode{'s' * (legal != 1)}"
+    note = f"kept {few}, not {count}: modes {runs(split)} belong together and would have been split"
     return Kept(numbers=ordered.kept(legal), notes=(note,))
 
 

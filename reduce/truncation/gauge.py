@@ -17,7 +17,7 @@ from modesieve.reduce.model import Model, Structure
 from modesieve.reduce.progress import Listener, tell
 from modesieve.reduce.report import hertz
 from modesieve.reduce.response.deviation import Yardstick, joined, yardstick
-from modesieve.reduce.response.grid import densified, frequency_grid, has_integrators, undamped_omega
+from modesieve.reduce.response.grid import clear_of, densified, frequency_grid, has_integrators, undamped_omega
 from modesieve.reduce.response.norms import largest_singular_value
 from modesieve.reduce.response.records import FullResponse
 from modesieve.reduce.response.small import SmallSystem
@@ -137,9 +137,7 @@ def worse_between(modes: Modes, yard: Yardstick, small: SmallSystem, of: str, *,
     Estimated with all computed modes; the full model is then solved there, so that what is reported stays measured.
     """
     dense = densified(yard.omega, 6)
-    if modes.certificate.complete == "no" and len(modes) == 0:
-        return np.zeros(0)
-    size = _estimate(modes, yard, small, dense, of)
+    size = np.where(clear_of(dense, undamped_omega(modes)), _estimate(modes, yard, small, dense, of), 0.0)
     known = np.isin(dense, yard.omega)
     ceiling = 1.01 * np.nanmax(size[known], initial=0.0)
     peaks = np.flatnonzero(~known & (size > ceiling))

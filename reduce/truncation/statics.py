@@ -8,7 +8,7 @@ acceleration outputs it would be ``s X`` and ``s^2 X``, improper.
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -28,16 +28,54 @@ def terms_of(modes: Modes, numbers: Any) -> Ints:
     return np.unique(modes.term[index]).astype(np.int64)
 
 
-def cut(modes: Modes, numbers: Any, statics: str, parts: Real | None = None) -> SmallSystem:
-    """The small system of the kept ``numbers`` with its statics ("none" or "feedthrough", checked before).
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Cutter:
+    """Makes the small system of any kept set of one list of modes with one kind of statics.
 
-    parts: `static_terms`, for callers that cut many times.
+    parts: the static part of every term (``feedthrough``); hub: the reference model whose tail gives pseudo-modes
+    (``vectors``), ``levels`` of them.
     """
-    keep = terms_of(modes, numbers)
-    small = modes.system.select(keep)
-    if statics == "none":
-        return small
-    return with_remainder(small, remainder(modes, keep, parts), loss_factor(modes.system))
+
+    modes: Modes
+    statics: str
+    parts: Real | None = None
+    hub: Any = None
+    levels: int = 0
+
+    def __call__(self, numbers: Any) -> SmallSystem:
+        """The small system that keeps the mode ``numbers``."""
+        if self.statics == "vectors":
+            return self.tailed(numbers).system
+        keep = terms_of(self.modes, numbers)
+        small = self.modes.system.select(keep)
+        if self.statics == "none":
+            return small
+        return with_remainder(small, remainder(self.modes, keep, self.parts), loss_factor(self.modes.system))
+
+    def tailed(self, numbers: Any) -> Any:
+        from modesieve.reduce.truncation.tails import with_tail_levels
+
+        return with_tail_levels(self.hub, tuple(int(i) for i in numbers), self.levels)
+
+    def notes(self, numbers: Any, band: tuple[float, float] | None) -> tuple[str, ...]:
+        """What to say about pseudo-modes."""
+        if self.statics != "vectors":
+            return ()
+        tailed = self.tailed(numbers)
+        inside = tailed.inside(band) if band is not None else ()
+        told = [f"{len(tailed.pseudo_omega)} pseudo-modes in {self.levels} tail levels"]
+        if len(inside):
+            told.append(f"{len(inside)} pseudo-modes lie inside the band: keep more modes")
+        return tuple(told)
+
+
+def cutter(modes: Modes, statics: str, levels: int) -> Cutter:
+    """The cutter of checked ``statics``; for ``vectors`` it makes the hub (one factorisation, a few solves)."""
+    if statics == "vectors":
+        from modesieve.reduce.truncation.build import build_hub
+
+        return Cutter(modes=modes, statics=statics, hub=build_hub(modes, levels), levels=levels)
+    return Cutter(modes=modes, statics=statics, parts=static_terms(modes) if statics == "feedthrough" else None)
 
 
 def with_remainder(small: SmallSystem, X: Real, eta: float) -> SmallSystem:
@@ -116,17 +154,17 @@ def legal(modes: Modes, statics: str | None) -> str:
     reason = refusal(modes)
     if statics is None:
         return "none" if reason else "feedthrough"
-    if statics == "none" or (statics == "feedthrough" and not reason):
-        return statics
+    if statics in ("none", "vectors") or (statics == "feedthrough" and not reason):
+        return statics  # vectors: the hub says whether it can be made
     if statics == "feedthrough":
         raise ChoiceError(
             "statics feedthrough is not possible here",
             expected="displacement (or only) outputs and a static response",
             got=reason,
-            remedy="use statics none and keep modes to 1.5 or 2 times the band's top",
+            remedy="use statics vectors, or none with modes to 1.5 or 2 times the band's top",
         )
     raise ChoiceError(
         f"statics {statics} is not available",
-        expected="none" if reason else "none or feedthrough",
+        expected="none or vectors" if reason else "none, feedthrough or vectors",
         got=str(statics),
     )

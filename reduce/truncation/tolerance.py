@@ -20,7 +20,7 @@ from modesieve.reduce.response.records import FullResponse
 from modesieve.reduce.truncation.choice import Sequence
 from modesieve.reduce.truncation.gauge import Solver, refined, response, told, yardstick_for
 from modesieve.reduce.truncation.records import Tolerance
-from modesieve.reduce.truncation.statics import cut, static_terms
+from modesieve.reduce.truncation.statics import Cutter
 
 _WITNESSES = 8
 _ROUNDS = 6
@@ -41,17 +41,15 @@ class Found:
 class _Search:
     """One pass over the counts. ``witnesses``: sample indices where a count failed; ``best``: (error, count)."""
 
-    modes: Modes
     ordered: Sequence
-    statics: str
+    make: Cutter
     yard: Yardstick
     tolerance: Tolerance
     outputs: Ints
-    parts: Real | None = None
     witnesses: list[int] = field(default_factory=list)
 
     def passes(self, count: int) -> bool:
-        small = cut(self.modes, self.ordered.order[:count], self.statics, self.parts)
+        small = self.make(self.ordered.order[:count])
         spots = np.array(self.witnesses, dtype=int)
         if spots.size and self._errors(response(small, self.yard.omega[spots]), spots).max() > self.tolerance.value:
             return False
@@ -68,7 +66,7 @@ class _Search:
         return min((self.error(int(count)), int(count)) for count in picks)
 
     def error(self, count: int) -> float:
-        small = cut(self.modes, self.ordered.order[:count], self.statics, self.parts)
+        small = self.make(self.ordered.order[:count])
         return self._worst(response(small, self.yard.omega))[0]
 
     def _errors(self, R: Complex, spots: Ints) -> Real:
@@ -91,7 +89,7 @@ def smallest(
     modes: Modes,
     ordered: Sequence,
     tolerance: Tolerance,
-    statics: str,
+    make: Cutter,
     full: FullResponse,
     band: tuple[float, float],
     *,
@@ -108,17 +106,14 @@ def smallest(
     """
     yard = yardstick_for(modes, full, band)
     outputs = _checked(tolerance, yard)
-    parts = static_terms(modes) if statics == "feedthrough" else None
     start, changed, rounds = 0, True, 0
     notes = _left_out(tolerance, yard, outputs)
     while changed:
-        search = _Search(
-            modes=modes, ordered=ordered, statics=statics, yard=yard, tolerance=tolerance, outputs=outputs, parts=parts
-        )
+        search = _Search(ordered=ordered, make=make, yard=yard, tolerance=tolerance, outputs=outputs)
         start = _first_passing(search, start, progress)
         changed = solve is not None and rounds < _ROUNDS
         if solve is not None and changed:
-            small = cut(modes, ordered.order[: ordered.cuts[start]], statics, parts)
+            small = make(ordered.order[: ordered.cuts[start]])
             full, yard, changed = refined(modes, yard, full, solve, small, tolerance.of, band)
             rounds += 1
     if solve is None:
@@ -146,7 +141,7 @@ def _unmet(search: _Search) -> ChoiceError:
         f"no count of modes meets {_size(tolerance, tolerance.value)} of {tolerance.of}"
         if tolerance.of != "absolute"
         else f"no count of modes meets {_size(tolerance, tolerance.value)}",
-        expected=f"an error within the tolerance with at most {total} modes, statics {search.statics}",
+        expected=f"an error within the tolerance with at most {total} modes, statics {search.make.statics}",
         got=f"at best {best}",
         remedy="compute more modes, allow better statics, or loosen the tolerance",
     )

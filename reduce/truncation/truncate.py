@@ -25,7 +25,7 @@ from modesieve.reduce.truncation.gauge import (
     yardstick_for,
 )
 from modesieve.reduce.truncation.records import Above, Band, Choice, Count, ReducedModel, Statics, Tolerance
-from modesieve.reduce.truncation.statics import cut, legal, refusal
+from modesieve.reduce.truncation.statics import Cutter, cutter, legal, refusal
 from modesieve.reduce.truncation.tolerance import smallest
 
 
@@ -43,6 +43,7 @@ def truncate(
     choice: Choice,
     *,
     statics: Statics | None = None,
+    levels: int = 2,
     band: tuple[float, float] | None = None,
     full: FullResponse | None = None,
     progress: Listener = None,
@@ -51,8 +52,9 @@ def truncate(
 
     ranking: ranked modes; bare modes are ranked by the default measure where the choice needs an order. choice: Count,
     Band, Keep, Tolerance or a tuple of Above (any of them suffices). statics: "none", "feedthrough" (adds the exact
-    static remainder X of everything dropped), None: the best that is legal for all outputs. band (rad/s): where the
-    error is measured; by default the ranking's, the choice's own, or 0 to the counted range over 1.5 (not for a
+    static remainder X of everything dropped), "vectors" (adds pseudo-modes, ``levels`` tail levels of them: exact
+    statics for every kind of output), None: feedthrough where it is legal for all outputs, else none. band (rad/s):
+    where the error is measured; by default the ranking's, the choice's own, or 0 to the counted range over 1.5 (not for a
     Tolerance, which needs a stated band). full: a response of the full model to measure on, else computed here.
 
     Always-kept modes (rigid-body, integrating, unstable) are kept whatever the choice, and count. The notes of the
@@ -61,26 +63,24 @@ def truncate(
     Raises ChoiceError for choices that cannot be met, each with its reason.
     """
     modes, table = _parts(ranking, choice, band)
-    statics = legal(modes, statics)  # type: ignore[assignment]
-    notes = () if statics != "none" else _why_none(modes)
+    make = cutter(modes, legal(modes, statics), levels)
     around = _band(choice, band, table, modes)
-    if isinstance(choice, Tolerance):
-        kept, measured = _by_tolerance(modes, table, choice, statics, around, full, progress)  # type: ignore[arg-type]
+    if isinstance(choice, Tolerance) and table is not None and around is not None:
+        kept, measured = _by_tolerance(table, choice, make, around, full, progress)
     else:
         kept = resolve(choice, modes, table)
-        system = cut(modes, kept.numbers, statics)  # type: ignore[arg-type]
-        measured = _measure(modes, system, around, full, progress)
+        measured = _measure(modes, make(kept.numbers), around, full, progress)
     return ReducedModel(
         modes=modes,
         kept=kept.numbers,
-        system=cut(modes, kept.numbers, statics),  # type: ignore[arg-type]
-        statics=statics,  # type: ignore[arg-type]
+        system=make(kept.numbers),
+        statics=make.statics,  # type: ignore[arg-type]
         choice=choice,
         ranked_by=table.by if table is not None else "",
         band=around,
         error=measured.figure,
         samples=measured.full,
-        notes=(*notes, *kept.notes, *measured.notes),
+        notes=(*_why_none(modes, statics), *make.notes(kept.numbers, around), *kept.notes, *measured.notes),
         ranking=table,
     )
 
@@ -109,8 +109,9 @@ def _some(modes: Modes) -> Modes:
     return modes
 
 
-def _why_none(modes: Modes) -> tuple[str, ...]:
-    reason = refusal(modes)
+def _why_none(modes: Modes, asked: str | None) -> tuple[str, ...]:
+    """Why nobody's choice became none."""
+    reason = refusal(modes) if asked is None else ""
     return (f"statics none: {reason}",) if reason else ()
 
 
@@ -134,22 +135,33 @@ def _band(
 
 
 def _by_tolerance(
-    modes: Modes,
     table: Ranking,
     choice: Tolerance,
-    statics: str,
+    make: Cutter,
     band: tuple[float, float],
     full: FullResponse | None,
     progress: Listener,
 ) -> tuple[Kept, _Measured]:
+    modes = table.modes
+    _ported(modes)
     ordered = sequence(modes, table)
     solve = None if full is not None else solver_of(modes, progress)
     samples = _first_samples(modes, band, full, solve, progress)
-    found = smallest(modes, ordered, choice, statics, samples, band, solve=solve, progress=progress)
+    found = smallest(modes, ordered, choice, make, samples, band, solve=solve, progress=progress)
     numbers = ordered.kept(found.count)
-    R = response(cut(modes, numbers, statics), found.full.omega)
+    R = response(make(numbers), found.full.omega)
     notes = (*found.notes, found.yard.threshold_note) if choice.of == "local" else found.notes
     return Kept(numbers=numbers), _Measured(figure=found.yard.figure(R, choice.of), full=found.full, notes=notes)
+
+
+def _ported(modes: Modes) -> None:
+    if 0 in (modes.origin.m, modes.origin.p):
+        raise ChoiceError(
+            "a tolerance needs a response to hold for",
+            expected="at least one input and one output",
+            got=f"{modes.origin.m} inputs and {modes.origin.p} outputs",
+            remedy="give the model loads and outputs, or choose by count or band",
+        )
 
 
 def _measure(

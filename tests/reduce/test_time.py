@@ -143,9 +143,9 @@ def test_time_grid_for_real_poles_covers_fast_and_slow() -> None:
 @pytest.mark.parametrize(
     ("lam", "end"),
     [
-        ([-0.5 + 10j], 5 / 0.5),
+        ([-1.0 + 10j], 5 / 1.0),
         ([-0.001 + 10j], 12 * 2 * np.pi / 10),
-        ([0j, 0j, -0.5 + 10j], 10.0),
+        ([0j, 0j, -1.0 + 10j], 5.0),
         ([0.1 + 0j, -0.01 + 0j], 3 / 0.1),
         ([0j], 12 * 2 * np.pi / 20),
     ],
