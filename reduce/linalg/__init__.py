@@ -1,16 +1,20 @@
-"""Sparse linear algebra: factorisations, eigenpairs of symmetric pencils, and their count."""
+"""Factorisations and eigenpairs of sparse pencils: the ground that every stage stands on."""
 
-from modesieve.reduce.linalg.certify import certified_pairs
 from modesieve.reduce.linalg.count import CountResult, count_below, gap_above
 from modesieve.reduce.linalg.factor import Factor, Inertia, Prediction, factorise, predict
-from modesieve.reduce.linalg.lanczos import SymmetricPairs, lowest_pairs, residuals
+from modesieve.reduce.linalg.lanczos import all_pairs, certified_pairs, lowest_pairs
+from modesieve.reduce.linalg.pairs import SymmetricPairs, residuals
+from modesieve.reduce.linalg.search import shift_and_factor
+from modesieve.reduce.linalg.shift import Shifted
 
 __all__ = [
     "CountResult",
     "Factor",
     "Inertia",
     "Prediction",
+    "Shifted",
     "SymmetricPairs",
+    "all_pairs",
     "certified_pairs",
     "count_below",
     "factorise",
@@ -18,4 +22,5 @@ __all__ = [
     "lowest_pairs",
     "predict",
     "residuals",
+    "shift_and_factor",
 ]

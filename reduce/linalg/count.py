@@ -96,8 +96,20 @@ def at_infinity(
 
 def massless_rows(M: Sparse) -> Ints:
     """Rows of M that hold nothing but zeros."""
-    largest = abs(sp.csr_array(M)).max(axis=1)
-    return np.flatnonzero(np.asarray(largest.todense()).ravel() == 0)
+    return np.flatnonzero(row_sums(M) == 0)
+
+
+def find_multipliers(K: Sparse, M: Sparse) -> Ints:
+    """Rows that are Lagrange multipliers: no mass, no stiffness among themselves, coupled to the rest."""
+    candidates = np.flatnonzero((row_sums(M) == 0) & (K.diagonal() == 0) & (row_sums(K) > 0))
+    if candidates.size == 0:
+        return candidates
+    return candidates[row_sums(K[candidates][:, candidates]) == 0]
+
+
+def row_sums(A: Sparse) -> Real:
+    """Sum of absolute values of every row, shape (n,)."""
+    return np.asarray(abs(A).sum(axis=1)).ravel()
 
 
 def gap_above(x: Real, near: float, *, least: float = GAP) -> float:

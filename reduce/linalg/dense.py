@@ -59,17 +59,35 @@ def all_pairs(K: Sparse, M: Sparse, sigma: float, solve: Any) -> tuple[Real, Rea
     order = np.argsort(sigma + 1 / theta)
     theta, Z = theta[order], Z[:, order]
     x, vectors = sigma + 1 / theta, half @ (Z / theta)
-    if B.shape[1] == K.shape[0]:
-        x, vectors = _with_high_end(K, M, x, vectors)
+    x, vectors = _with_high_end(K, M, x, vectors)
     return x, vectors / np.sqrt(np.maximum(np.einsum("ij,ij->j", vectors, M @ vectors), 1e-300))
 
 
 def _with_high_end(K: Sparse, M: Sparse, x: Real, vectors: Real) -> tuple[Real, Real]:
-    try:
-        x_high, high = eigh(K.toarray(), M.toarray())
-    except np.linalg.LinAlgError:
-        return x, vectors
+    """The upper half (on a logarithmic scale) from the condensed pencil itself, where that exists."""
     size = np.abs(x)
     take = size > np.sqrt(max(float(size.min()), EPS * float(size.max())) * float(size.max()))
+    if not take.any():
+        return x, vectors
+    try:
+        x_high, high = _condensed_pairs(K.toarray(), M.toarray())
+    except np.linalg.LinAlgError:
+        return x, vectors
+    if len(x_high) != len(x):
+        return x, vectors
     take &= x_high > 0
     return np.where(take, x_high, x), np.where(take, high, vectors)
+
+
+def _condensed_pairs(K: Real, M: Real) -> tuple[Real, Real]:
+    """All pairs by `eigh` after massless rows s are condensed: ``K_mm - K_ms K_ss^-1 K_sm``. LinAlgError if it fails."""
+    with_mass = np.abs(M).sum(axis=1) > 0
+    m, s = np.flatnonzero(with_mass), np.flatnonzero(~with_mass)
+    T = -np.linalg.solve(K[np.ix_(s, s)], K[np.ix_(s, m)]) if s.size else np.zeros((0, m.size))
+    if not np.all(np.isfinite(T)):
+        raise np.linalg.LinAlgError
+    K_c = K[np.ix_(m, m)] + K[np.ix_(m, s)] @ T
+    x, upper = eigh((K_c + K_c.T) / 2, M[np.ix_(m, m)])
+    vectors = np.zeros((len(K), len(m)))
+    vectors[m], vectors[s] = upper, T @ upper
+    return x, vectors

@@ -21,8 +21,8 @@ def factor_nonzeros(graph: Any, weight: Ints, order: Ints) -> int:
 
     >>> import scipy.sparse as sp
     >>> star = sp.csr_array(np.array([[0, 1, 1], [1, 0, 0], [1, 0, 0]]))
-    >>> factor_nonzeros(star, np.ones(3, int), np.arange(3)), factor_nonzeros(star, np.ones(3, int), np.array([1, 2, 0]))
-    (6, 5)
+    >>> [factor_nonzeros(star, np.ones(3, int), np.array(order)) for order in ([0, 1, 2], [1, 2, 0])]
+    [6, 5]
     """
     P = graph[order][:, order].tocsr()
     P.sort_indices()

@@ -16,12 +16,14 @@ from modesieve.reduce.linalg.factor import Factor, SolverName, Symmetry, factori
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Shifted:
-    """A factor of ``K - sigma M``; ``solves`` counts right-hand sides used to find it."""
+    """A live factor of ``K - sigma M``; solves: right-hand sides used to find it; negative: eigenvalues below sigma
+    (unstable modes) as far as its pivots told."""
 
-    sigma: float
     factor: Factor
+    sigma: float
     factorisations: int
     solves: int = 0
+    negative: int = 0
 
 
 def combined(K: Sparse, M: Sparse, sigma: float) -> Sparse:
