@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from modesieve.reduce.arrays import Real
+from modesieve.reduce.arrays import Ints, Real
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.model import Model, Structure, Thermal
@@ -17,6 +17,7 @@ from modesieve.reduce.truncation.hub import Hub
 from modesieve.reduce.truncation.krylov import Shifted, Tail, deflation, residual_coordinates, tail_vectors
 from modesieve.reduce.truncation.pencil import Pencil, pencil_of
 from modesieve.reduce.truncation.rest import Rest, rest_of
+from modesieve.reduce.truncation.shift import factor_of
 
 #: Reasons of the modal stage for modes whose response has no static part.
 FLOATING = ("rigid body", "integrating")
@@ -43,13 +44,14 @@ def build_hub(modes: Modes, levels: int = 3, *, shifted: Shifted | None = None) 
     pencil = pencil_of(model)
     if np.isinf(x_c):
         return _complete_hub(modes.system, pencil, common)
-    shifted = shifted if shifted is not None else shifted_factor(modes)
+    shifted = shifted if shifted is not None else factor_of(modes)
     away = deflation(pencil.M, phi)
-    ports, where = _ports(pencil)
+    ports, places = _ports(pencil)
     tail = tail_vectors(pencil, ports, away, shifted, levels)
     T, image, pseudo = _rediagonalised(pencil, tail, rest)
     coordinates = residual_coordinates(pencil.K, pencil.M, shifted.sigma, T, np.hstack([tail.start, image]))
-    load, outputs = _spread(coordinates[:, : ports.shape[1]], where, pencil)
+    load, outputs = _spread(coordinates[:, : ports.shape[1]], places, pencil)
+    load_energy, output_energy = _energies(ports, tail, places, pencil)
     massless = pencil.static + pseudo.X
     # The constant parts are our own: a list of modes cannot know those of massless combinations of unknowns.
     terms = replace(terms, D=common["direct"], X=massless, eta_X=rest.eta)
@@ -61,6 +63,8 @@ def build_hub(modes: Modes, levels: int = 3, *, shifted: Shifted | None = None) 
         output_rest=outputs,
         tail_rest=coordinates[:, ports.shape[1] :][:, : pseudo.terms],
         massless=massless,
+        load_energy=load_energy,
+        output_energy=output_energy,
         solves=tail.solves,
         **common,
     )
@@ -85,13 +89,6 @@ def rounding_limit(modes: Modes) -> float:
     """Relative widening of every bound: 1e-12, or ten times the worst residual of a computed mode."""
     worst = float(np.max(modes.residual)) if len(modes) else 0.0
     return max(1e-12, 10 * worst)
-
-
-def shifted_factor(modes: Modes) -> Shifted:
-    """The modal stage's factor if the run still holds it, else a new one close below the elastic spectrum."""
-    from modesieve.reduce.truncation.shift import factor_of
-
-    return factor_of(modes)
 
 
 def _checked(modes: Modes) -> tuple[Model, Real]:
@@ -120,26 +117,29 @@ def _direct(model: Model) -> Real:
     return np.asarray(model.Du if isinstance(model, Structure) else model.D)
 
 
-def _ports(pencil: Pencil) -> tuple[Real, list[Any]]:
-    """All nonzero port columns side by side, and for the load and each output kind the mask of its nonzero ones."""
-    kinds = [pencil.load, *pencil.outputs]
-    where = [None if P is None else np.any(P, axis=0) for P in kinds]
-    parts = [P[:, mask] for P, mask in zip(kinds, where, strict=True) if P is not None and mask is not None]
-    return np.hstack(parts), where
+def _ports(pencil: Pencil) -> tuple[Real, Ints]:
+    """All nonzero port columns side by side, and their places among load columns and the three kinds of outputs."""
+    none = np.zeros((pencil.n, pencil.p))
+    every = np.hstack([pencil.load, *(none if C is None else C for C in pencil.outputs)])
+    places = np.flatnonzero(np.any(every, axis=0))
+    return every[:, places], places
 
 
-def _spread(coordinates: Real, where: list[Any], pencil: Pencil) -> tuple[Real, Real]:
+def _energies(ports: Real, tail: Tail, places: Ints, pencil: Pencil) -> tuple[Real, Real]:
+    """Gram matrices in K_s^-1 of the deflated loads (m, m) and of all output rows (3 p, 3 p)."""
+    width = pencil.m + 3 * pencil.p
+    gram = ports.T @ tail.start  # the start is free of the computed modes, so the ports need not be
+    full = np.zeros((width, width))
+    full[np.ix_(places, places)] = (gram + gram.T) / 2
+    return full[: pencil.m, : pencil.m], full[pencil.m :, pencil.m :]
+
+
+def _spread(coordinates: Real, places: Ints, pencil: Pencil) -> tuple[Real, Real]:
     """Residual coordinates of the ports back in their places: load (r, m) and outputs (3, r, p)."""
-    r, at = coordinates.shape[0], 0
-    out = []
-    for mask, width in zip(where, (pencil.m, pencil.p, pencil.p, pencil.p), strict=True):
-        full = np.zeros((r, width))
-        if mask is not None:
-            count = int(np.count_nonzero(mask))
-            full[:, mask] = coordinates[:, at : at + count]
-            at += count
-        out.append(full)
-    return out[0], np.stack(out[1:])
+    full = np.zeros((coordinates.shape[0], pencil.m + 3 * pencil.p))
+    full[:, places] = coordinates
+    kinds = np.split(full[:, pencil.m :], 3, axis=1)
+    return full[:, : pencil.m], np.stack(kinds)
 
 
 def _rediagonalised(pencil: Pencil, tail: Tail, rest: Rest) -> tuple[Real, Real, Diagonal]:
@@ -183,6 +183,8 @@ def _complete_hub(system: SmallSystem, pencil: Pencil, common: dict[str, Any]) -
         load_rest=np.zeros((0, pencil.m)),
         output_rest=np.zeros((3, 0, pencil.p)),
         tail_rest=np.zeros((0, 0)),
+        load_energy=np.zeros((pencil.m, pencil.m)),
+        output_energy=np.zeros((3 * pencil.p, 3 * pencil.p)),
         massless=pencil.static if np.any(pencil.static) else diagonal(system).X,
         **common,
     )

@@ -39,6 +39,8 @@ class Hub:
     x_c: every eigenvalue below it is computed (rad^2/s^2 for structures, 1/s thermal; inf: all are). sigma: the shift.
     load_rest (r, m), output_rest (3, r, p), tail_rest (r, t): residuals in an orthonormal basis of K_s^-1, for the
     load, the three kinds of output and the tail vectors: ``r = load_rest - d(w) tail_rest z`` with d = a sigma + b.
+    load_energy (m, m), output_energy (3 p, 3 p): ``W_B = F^T K_s^-1 F - sum_S b_i b_i^T/(x_i - sigma)`` and the same of
+    the stacked output rows: the energy of everything uncomputed, before any tail vector.
     amplitudes (m,), resolutions (p,): the weights of the largest singular value. direct (p, m): the model's own
     feedthrough; massless (p, m): what massless unknowns answer, over a(w). floating (k,): mask of the computed terms
     that are rigid-body or integrating modes; every small model keeps them as they are, so they bring no rounding of
@@ -59,13 +61,17 @@ class Hub:
     resolutions: Real
     direct: Real
     massless: Real
+    load_energy: Real
+    output_energy: Real
     floating: Any = ()
     relative_rounding: float = 1e-12
     damping: BaseDamping = None
     solves: int = 0
 
     def __post_init__(self) -> None:
-        for name in ("load_rest", "output_rest", "tail_rest", "amplitudes", "resolutions", "direct", "massless"):
+        for name in ("load_rest", "output_rest", "tail_rest", "amplitudes", "resolutions"):
+            object.__setattr__(self, name, frozen(np.asarray(getattr(self, name), dtype=float)))
+        for name in ("direct", "massless", "load_energy", "output_energy"):
             object.__setattr__(self, name, frozen(np.asarray(getattr(self, name), dtype=float)))
 
     @cached_property

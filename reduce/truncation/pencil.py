@@ -14,6 +14,7 @@ import numpy as np
 
 from modesieve.reduce.arrays import Real, Sparse
 from modesieve.reduce.errors import ChoiceError, SolveError
+from modesieve.reduce.linalg import factorise
 from modesieve.reduce.model import Model, Structure, Thermal
 
 
@@ -95,11 +96,9 @@ def _move(port: Real, rows: Any, away: Sparse, solve: Any) -> Real:
 
 
 def _factor(K_ss: Sparse) -> Any:
-    from scipy.sparse.linalg import splu
-
     try:
-        factor = splu(K_ss.tocsc())
-    except RuntimeError as error:
+        factor = factorise(K_ss, symmetry="indefinite")
+    except SolveError as error:
         raise SolveError(
             "the massless unknowns that carry loads or outputs cannot be condensed",
             expected="a regular stiffness among the massless unknowns",

@@ -38,10 +38,11 @@ class Tailed:
         return self.pseudo_omega[(self.pseudo_omega >= low) & (self.pseudo_omega <= high)]
 
 
-def with_tail_levels(hub: Hub, kept: tuple[int, ...], levels: int) -> Tailed:
+def with_tail_levels(hub: Hub, kept: tuple[int, ...], levels: int, *, damped: bool = True) -> Tailed:
     """The small model that keeps the modes numbered ``kept`` (1-based) and has ``levels`` tail levels (0 to hub's).
 
-    Level 0 is the plain sum of the kept modes. The pseudo-modes carry the base damping by its own rule.
+    Level 0 is the plain sum of the kept modes. damped: the pseudo-modes carry the base damping by its own rule, so that
+    nothing rings for ever; otherwise what the full model has there: with modal damping, none, which is nearer to it.
     Raises ChoiceError for more levels than the hub holds.
     """
     most = hub.levels if hub.terms.terms > hub.computed else 3
@@ -60,10 +61,31 @@ def with_tail_levels(hub: Hub, kept: tuple[int, ...], levels: int) -> Tailed:
         )
     pseudo = pseudo_modes(rest, levels, _port_sizes(terms))
     if terms.order == 2:
-        d, eta = pseudo_damping(hub.damping, pseudo.x)
+        law = (hub.rest.viscous(pseudo.x), np.full(pseudo.terms, hub.rest.eta))
+        d, eta = pseudo_damping(hub.damping, pseudo.x) if damped else law
         pseudo = replace(pseudo, d=d, eta=eta)
     size = pseudo.x if terms.order == 1 else np.sqrt(np.maximum(pseudo.x, 0.0))
     return Tailed(system=terms.select(keep).join(pseudo).system(), pseudo_omega=size)
+
+
+def with_static_remainder(hub: Hub, kept: tuple[int, ...]) -> SmallSystem:
+    """The kept modes and the exact static remainder of everything else as feedthrough (mode acceleration).
+
+    Raises ChoiceError for velocity and acceleration outputs, whose remainder would grow with the frequency.
+    """
+    terms = hub.terms
+    if np.any(terms.cv) or np.any(terms.ca):
+        raise ChoiceError(
+            "statics feedthrough is not possible here",
+            expected="displacement (or only) outputs",
+            got="velocity or acceleration outputs: their static remainder is improper",
+            remedy="use tail vectors",
+        )
+    keep = np.asarray(sorted(kept), dtype=int) - 1
+    rest = terms.select(np.setdiff1d(np.arange(terms.terms), keep))
+    elastic = rest.x > 0
+    X = rest.cq[:, elastic] / rest.x[elastic] @ rest.b[elastic]
+    return replace(terms.select(keep), X=terms.X + X, eta_X=hub.rest.eta).system()
 
 
 def _port_sizes(terms: Diagonal) -> Real:
