@@ -73,9 +73,9 @@ def file_error(error: OSError, path: PathLike) -> FileError:
     return FileError(what, expected=expected, got=got, where=os.fspath(path), remedy=remedy)
 
 
-_DISK = ("the disk is full", "free space for the whole file; the old file is unchanged", "free some space")
-_SIZE = ("the file grew past the allowed size", "room for the whole file; the old file is unchanged", "raise the limit")
-_READ_ONLY = ("the folder cannot be written to", "a folder with write permission", "choose another place for the output")
+_DISK = ("the disk is full", "room for the whole file; the old file is unchanged", "free some space")
+_SIZE = ("the file outgrew the size limit", "room for the whole file; the old file is unchanged", "raise the limit")
+_READ_ONLY = ("the folder cannot be written to", "a folder with write permission", "choose another output folder")
 _MEANING = {
     errno.ENOSPC: _DISK,
     errno.EDQUOT: _DISK,

@@ -1,8 +1,8 @@
 """Quantities with units at the edge: read from a person's text, converted, and written for a person.
 
 Unit names and factors come from pint; the rules on top are ours, because pint alone reads 200 Hz as 200 rad/s (the
-factor 2 pi is lost), turns a difference of 0.5 degC into 273.65 K and evaluates arithmetic in its input. Frequencies get
-their 2 pi, differences of temperature use the size of a degree, and only `parse_temperature` knows absolute ones.
+factor 2 pi is lost), turns a difference of 0.5 degC into 273.65 K and evaluates arithmetic in its input. Frequencies
+get their 2 pi, differences of temperature use the size of a degree, only `parse_temperature` knows absolute ones.
 """
 
 from __future__ import annotations
@@ -92,7 +92,7 @@ _SUPERSCRIPT = str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹⁻", "0123456789-")
 #: What people write and pint does not know, or knows as something else.
 _SPELT = {"Nm": "N m", "kNm": "kN m", "Nmm": "N mm", "MNm": "MN m", "%": "percent", "‰": "permille", "°": "degree"}
 _SPELT |= {"g0": "standard_gravity", "g_0": "standard_gravity"}
-_KNOWN = "m mm cm km um in ft kg g t lb N mN kN lbf s ms us min h Hz kHz mHz rad mrad deg rpm K degC degF W mW kW Pa MPa %"
+_KNOWN = "m mm cm km um in ft kg g t lb N mN kN lbf s ms us min h Hz kHz mHz rad mrad deg rpm K degC degF W mW kW MPa"
 
 
 # ---- reading -------------------------------------------------------------------------------------------------------
@@ -302,8 +302,7 @@ def _named(name: str, text: str) -> tuple[float, Dimension, str]:
 
 def _difference(name: str) -> str:
     """The unit of a difference where zero lies elsewhere (degree Celsius and Fahrenheit)."""
-    offset = {"degree_Celsius": "kelvin", "degree_Fahrenheit": "degree_Rankine", "degree_Reaumur": "delta_degree_Reaumur"}
-    return offset.get(name, name)
+    return {"degree_Celsius": "kelvin", "degree_Fahrenheit": "degree_Rankine"}.get(name, name)
 
 
 def _unknown(name: str, text: str) -> UnitError:
@@ -331,7 +330,7 @@ def _tokens(text: str) -> list[str]:
         if found is None:
             raise _malformed(text)
         name, _, power, sign = found.groups()
-        out += _tokens(_SPELT[name]) if name in _SPELT and " " in _SPELT[name] else [_SPELT.get(name, name or power or sign)]
+        out += _SPELT[name].split() if name in _SPELT else [name or power or sign]
         at = found.end()
     return out
 
