@@ -7,7 +7,7 @@ outputs, Du feedthrough; E, K, F, C, D for thermal models; A, B, C, D, E for sta
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any, ClassVar, TypeAlias
 
 import numpy as np
@@ -15,7 +15,6 @@ import scipy.sparse as sp
 
 from modesieve.reduce.arrays import Complex, Real, Sparse, as_csr, frozen
 from modesieve.reduce.errors import ModelError
-
 
 #: Load, outputs and feedthrough may be left out; the record then holds arrays of no columns or zeros, never None.
 _ABSENT: Any = None
@@ -208,9 +207,10 @@ class Structure(_Common):
         K, M = _square(self.K, "stiffness"), _square(self.M, "mass")
         n = K.shape[0]
         _same_size(M, n, "mass", "stiffness")
-        for name, part in (("damping", self.damping.viscous), ("stiffness_loss", self.damping.stiffness_loss)):
-            if part is not None:
-                _same_size(_square(part, name), n, name, "stiffness")
+        for name, label in (("viscous", "damping"), ("stiffness_loss", "stiffness_loss")):
+            if (part := getattr(self.damping, name)) is not None:
+                local = _same_size(_square(part, label), n, label, "stiffness")
+                self._set(damping=replace(self.damping, **{name: local}))
         F = _load(self.F, n, "load")
         given = {"displacement_output": self.Cq, "velocity_output": self.Cv, "acceleration_output": self.Ca}
         rows = {np.asarray(C).shape[0] for C in given.values() if C is not None}
@@ -385,7 +385,9 @@ def _through(D: Any, p: int, m: int) -> Real:
 
 def _finite(values: Any, name: str) -> None:
     # The sum is finite unless an entry is not (or overflows): one pass, no n by n temporary.
-    if not np.isfinite(np.sum(values)):
+    with np.errstate(over="ignore", invalid="ignore"):
+        total = np.sum(values)
+    if not np.isfinite(total):
         bad = int(np.count_nonzero(~np.isfinite(values)))
         if bad:
             raise ModelError(
