@@ -21,7 +21,7 @@ const Charts = (() => {
   }
   const trim = (value) => String(Number(value.toPrecision(3)));
   const general = (value) => (Math.abs(value) >= 1e-3 && Math.abs(value) < 1e5 ? trim(value) : value.toExponential(2));
-  const percent = (value) => (!Number.isFinite(value) ? "undefined" : value !== 0 && value < 5e-5
+  const percent = (value) => (!Number.isFinite(value) ? "undefined" : value !== 0 && value < 1e-8
     ? `${(100 * value).toExponential(1)} %`.replace("-", "−") : `${trim(100 * value)} %`);
 
   const axis = (c, title, extra) => ({ title: { text: title, font: { size: 12 }, standoff: 6 }, color: c.ink,

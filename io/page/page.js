@@ -167,11 +167,11 @@ const modesieve = (() => {
 
   // ---- tables -----------------------------------------------------------------------------------------------------------
   function buildPairs() {
-    const head = el("tr"); head.append(el("th", "output \\ input"), ...data.inputs.map((i) => el("th", i.name, { scope: "col" })));
+    const head = el("tr"); head.append(el("th", "output \\ input"), ...data.inputs.map((i) => el("th", i.name, { scope: "col", title: i.name })));
     const all = el("tr"), cell = el("td", "", { colSpan: m }), button = el("button", "all pairs: largest singular value", { type: "button" });
     button.dataset.pair = "all"; cell.append(button); all.append(el("th", "", { scope: "row" }), cell);
     const rows = data.outputs.map((o, row) => {
-      const line = el("tr"); line.append(el("th", o.name, { scope: "row" }));
+      const line = el("tr"); line.append(el("th", o.name, { scope: "row", title: o.name }));
       for (let col = 0; col < m; col++) { const td = el("td"), b = el("button", "", { type: "button" }); b.dataset.pair = row * m + col; td.append(b); line.append(td); }
       return line;
     });
