@@ -10,6 +10,8 @@ from modesieve.reduce.modal.records import Modes, Ranking
 from modesieve.reduce.report import aligned, number, runs, share, span
 from modesieve.reduce.response.records import ErrorFigure, FullResponse
 from modesieve.reduce.response.small import SmallSystem
+from modesieve.reduce.truncation.guarantee import Guarantee
+from modesieve.reduce.truncation.hub import Hub
 
 Statics: TypeAlias = Literal["none", "feedthrough", "vectors"]
 
@@ -82,6 +84,9 @@ class ReducedModel:
     uniform: Real | None = None
     notes: tuple[str, ...] = ()
     ranking: Ranking | None = field(default=None, repr=False)
+    levels: int = 0
+    hub: Hub | None = field(default=None, repr=False)
+    guarantee: Guarantee | None = field(default=None, repr=False)
 
     @property
     def states(self) -> int:
