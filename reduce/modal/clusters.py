@@ -6,6 +6,8 @@ columns C, at most rank(C B) vectors matter: a basis of range(B) on which C acts
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 
 from modesieve.reduce.arrays import Real, Sparse
@@ -22,7 +24,7 @@ def eigenvalue_error(K: Sparse, x: Real, phi: Real) -> Real:
 
 
 def strain(K: Sparse, phi: Real) -> Real:
-    """``abs(phi_i)^T abs(K) abs(phi_i)``, shape (k,): a relative change eps of all entries of K moves x by eps times it."""
+    """``abs(phi_i)^T abs(K) abs(phi_i)``, shape (k,): what a relative change of all entries of K moves x by."""
     size = np.abs(phi)
     return np.asarray(np.einsum("ij,ij->j", size, abs(K) @ size))
 
@@ -39,8 +41,8 @@ def groups(x: Real, error: Real) -> list[tuple[int, ...]]:
     return [tuple(int(i) for i in run) for run in runs if len(run) > 1]
 
 
-def rotation(B: Real, C: Real) -> Real:
-    """Orthogonal Q (g, g): ``phi Q`` has its coupling in the first rank(C B) vectors.
+def rotation(B: Any, C: Any) -> Any:
+    """Unitary Q (g, g): ``phi Q`` has its coupling in the first rank(C B) vectors; real for real B and C.
 
     B (g, m) and C (p, g) weighted input rows and output columns of the group. The coupled vectors come first, the
     strongest in front; then those without output, then those without input.
@@ -50,18 +52,18 @@ def rotation(B: Real, C: Real) -> Real:
     r_b = _rank(s)
     heard, silent = U[:, :r_b], U[:, r_b:]
     _, t, Vt = np.linalg.svd(C @ heard)
-    r = _rank(t, np.linalg.norm(C))
-    coupled, blind = heard @ Vt.T[:, :r], heard @ Vt.T[:, r:]
+    r = _rank(t, float(np.linalg.norm(C)))
+    coupled, blind = heard @ Vt.conj().T[:, :r], heard @ Vt.conj().T[:, r:]
     Q = np.hstack([_by_strength(coupled, B, C), blind, silent])
     return Q if Q.shape == (g, g) else np.eye(g)
 
 
-def _by_strength(W: Real, B: Real, C: Real) -> Real:
+def _by_strength(W: Any, B: Any, C: Any) -> Any:
     """The same span turned to the principal axes of what it hears and shows, both scaled to one."""
     if W.shape[1] < 2:
         return W
-    b, c = W.T @ B, C @ W
-    gram = b @ b.T / np.linalg.norm(b) ** 2 + c.T @ c / np.linalg.norm(c) ** 2
+    b, c = W.conj().T @ B, C @ W
+    gram = b @ b.conj().T / np.linalg.norm(b) ** 2 + c.conj().T @ c / np.linalg.norm(c) ** 2
     return W @ np.linalg.eigh(-gram)[1]
 
 
