@@ -9,7 +9,7 @@ import numpy as np
 
 from modesieve.io import hdf5
 from modesieve.io.hdf5 import Node, Source
-from modesieve.io.matrices import write_array
+from modesieve.io.hdf5_arrays import array, read_real, write_array
 from modesieve.reduce.errors import FileError, ModelError
 from modesieve.reduce.model import BaseDamping, LossFactor, ModalRatio, RatioByFrequency, RatioByMode, Rayleigh
 
@@ -81,14 +81,14 @@ def _rayleigh(source: Source, root: Node) -> BaseDamping:
 
 
 def _by_frequency(source: Source, root: Node) -> BaseDamping:
-    data = hdf5.array(source, hdf5.child(source, root, "damping_by_frequency"))
+    data = array(source, hdf5.child(source, root, "damping_by_frequency"))
     if len(data.shape) != 2 or data.shape[1] != 2 or data.shape[0] < 1:
         got = f"shape {data.shape}"
         raise FileError("damping_by_frequency has the wrong shape", expected="(k, 2)", got=got, where=data.where)
     unit = hdf5.text_attribute(source, data.node, "unit", "Hz")
     if unit not in ("Hz", "rad/s"):
         raise FileError("unknown unit of frequency", expected='"Hz" or "rad/s"', got=repr(unit), where=data.where)
-    table = hdf5.read_real(data)
+    table = read_real(data)
     if np.any(np.diff(table[:, 0]) <= 0) or table[0, 0] < 0:
         raise ModelError("frequencies do not ascend", expected="ascending, from 0 on", where=data.where)
     _check_ratios(table[:, 1], data.where)
@@ -96,11 +96,11 @@ def _by_frequency(source: Source, root: Node) -> BaseDamping:
 
 
 def _by_mode(source: Source, root: Node) -> BaseDamping:
-    data = hdf5.array(source, hdf5.child(source, root, "damping_by_mode"))
+    data = array(source, hdf5.child(source, root, "damping_by_mode"))
     if len(data.shape) != 1 or data.shape[0] < 1:
         got = f"shape {data.shape}"
         raise FileError("damping_by_mode has the wrong shape", expected="a list", got=got, where=data.where)
-    table = hdf5.read_real(data)
+    table = read_real(data)
     _check_ratios(table, data.where)
     return RatioByMode(ratio=table)
 

@@ -10,7 +10,7 @@ import numpy as np
 
 from modesieve.io import hdf5
 from modesieve.io.hdf5 import Node, Source
-from modesieve.io.matrices import write_array
+from modesieve.io.hdf5_arrays import array, read_real, read_texts, write_array
 from modesieve.reduce.errors import FileError, ModelError
 from modesieve.reduce.model import Input, Interface, Output, Unknowns
 
@@ -49,11 +49,11 @@ def read_unknowns(source: Source, root: Node, n: int) -> Unknowns | None:
     node, direction = (_texts(source, group, name, n) for name in ("node", "direction"))
     xyz = None
     if (found := hdf5.child(source, group, "xyz")) is not None:
-        data = hdf5.array(source, found)
+        data = array(source, found)
         if data.shape != (n, 3):
             got = f"shape {data.shape}"
             raise ModelError("coordinates do not fit the model", expected=f"({n}, 3)", got=got, where=data.where)
-        xyz = hdf5.read_real(data, what="coordinates")
+        xyz = read_real(data, what="coordinates")
         xyz.flags.writeable = False
     return Unknowns(node=node or (), direction=direction or (), xyz=xyz)
 
@@ -109,22 +109,22 @@ def _texts(source: Source, group: Node, name: str, count: int) -> tuple[str, ...
     found = hdf5.child(source, group, name)
     if found is None:
         return None
-    data = hdf5.array(source, found)
+    data = array(source, found)
     if data.shape != (count,):
         expected, got = f"{count} entries, as the matrices have", f"shape {data.shape}"
         raise ModelError(f"{name} has the wrong number of entries", expected=expected, got=got, where=data.where)
-    return hdf5.read_texts(data, count)
+    return read_texts(data, count)
 
 
 def _weights(source: Source, group: Node, name: str, count: int) -> list[float | None] | None:
     found = hdf5.child(source, group, name)
     if found is None:
         return None
-    data = hdf5.array(source, found)
+    data = array(source, found)
     if data.shape != (count,):
         expected, got = f"{count} numbers", f"shape {data.shape}"
         raise ModelError(f"{name} has the wrong number of entries", expected=expected, got=got, where=data.where)
-    values = hdf5.read_real(data, finite=False)
+    values = read_real(data, finite=False)
     if np.any(values <= 0) or np.any(np.isinf(values)):
         got = f"{values[(values <= 0) | np.isinf(values)][0]:g}"
         raise ModelError(f"{name} must be above 0", expected="positive sizes, NaN for none", got=got, where=data.where)

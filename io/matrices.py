@@ -11,12 +11,9 @@ from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
-import numpy as np
-import scipy.sparse as sp
-
 from modesieve.io import hdf5
-from modesieve.io.hdf5 import Array, Node, Source
-from modesieve.reduce.arrays import Real, Sparse
+from modesieve.io.hdf5 import Node, Source
+from modesieve.io.hdf5_arrays import Array, array, read_real
 from modesieve.reduce.errors import FileError, ModelError
 
 _VALUES = ("data", "values")
@@ -86,67 +83,11 @@ def locate(source: Source, place: Place, parent: Node | None = None) -> Stored |
     return _told(stored, node, place)
 
 
-def read_sparse(stored: Stored) -> Sparse:
-    """The matrix as a canonical float64 CSR array: sorted indices, duplicates summed, both triangles."""
-    if stored.layout == "dense":
-        matrix = _dense_rows(stored)
-    elif stored.layout == "COO":
-        matrix = _from_coordinates(stored)
-    else:
-        matrix = _from_compressed(stored)
-    if stored.transposed:
-        matrix = matrix.T.tocsr()
-    if not matrix.has_canonical_format:
-        matrix.sum_duplicates()  # in place: the arrays are our own
-    return _both_triangles(matrix, stored) if stored.symmetric else matrix
-
-
-def read_dense(stored: Stored) -> Real:
-    """The matrix as a new dense float64 array (r, c)."""
-    if stored.layout != "dense" or stored.symmetric:
-        size = stored.final_shape[0] * stored.final_shape[1] * 8
-        stored.source.budget.take(size, stored.where)
-        return np.ascontiguousarray(read_sparse(stored).toarray())
-    out = hdf5.read_real(stored.values, what=f"{_short(stored)} holds values").reshape(stored.shape)
-    return np.ascontiguousarray(out.T) if stored.transposed else out
-
-
-def write_matrix(group: Node, name: str, matrix: Any) -> None:
-    """Write a dense array as a dataset, a sparse one as a binsparse CSR group, in chunks of 2 MiB."""
-    if not sp.issparse(matrix):
-        write_array(group, name, np.asarray(matrix))
-        return
-    csr = sp.csr_array(matrix)
-    part = group.create_group(name)
-    arrays = {"pointers_to_1": csr.indptr, "indices_1": csr.indices, "values": csr.data}
-    for key, values in arrays.items():
-        write_array(part, key, values)
-    header = {
-        "version": "0.1.0",
-        "format": "CSR",
-        "shape": list(csr.shape),
-        "number_of_stored_values": int(csr.nnz),
-        "data_types": {key: str(values.dtype) for key, values in arrays.items()},
-    }
-    part.attrs["binsparse"] = json.dumps({"binsparse": header}, indent=2, sort_keys=True)
-
-
-def write_array(group: Node, name: str, values: Any) -> None:
-    """Write an array; large ones in chunks of whole rows of about 2 MiB."""
-    chunks = None
-    if values.ndim and values.nbytes > 4 << 20:
-        row = max(values[:1].nbytes, 1)
-        chunks = (min(max((2 << 20) // row, 1), len(values)), *values.shape[1:])
-        if row > 4 << 20 and values.ndim == 2:
-            chunks = (1, (2 << 20) // values.itemsize)
-    group.create_dataset(name, data=values, chunks=chunks)
-
-
 # ---- what a file says about a matrix -------------------------------------------------------------------------------
 
 
 def _dense(source: Source, node: Node) -> Stored:
-    values = _real(hdf5.array(source, node))
+    values = _real(array(source, node))
     if len(values.shape) != 2:
         remedy = (
             f"store it with shape ({values.shape[0]}, 1) or (1, {values.shape[0]})" if len(values.shape) == 1 else ""
@@ -327,7 +268,7 @@ def _named(source: Source, node: Node, wanted: Iterable[str], held: tuple[str, .
         if name in held:
             found = hdf5.child(source, node, name)
             if found is not None:
-                return _real(hdf5.array(source, found, f"{node.name}/{name}"))
+                return _real(array(source, found, f"{node.name}/{name}"))
     where = source.at(node.name)
     expected = "one of " + ", ".join(dict.fromkeys(wanted))
     got = ", ".join(held[:10]) or "an empty group"
@@ -336,7 +277,7 @@ def _named(source: Source, node: Node, wanted: Iterable[str], held: tuple[str, .
 
 def _real(data: Array) -> Array:
     if data.content != "real":
-        hdf5.read_real(data)  # raises
+        read_real(data)  # raises
     return data
 
 
@@ -344,9 +285,9 @@ def _shape(source: Source, node: Node, held: tuple[str, ...]) -> tuple[int, int]
     where = source.at(f"{node.name}/shape")
     stated: Any = hdf5.number_attribute(source, node, "shape", 2)
     if stated is None and "shape" in held:
-        data = hdf5.array(source, hdf5.child(source, node, "shape"), f"{node.name}/shape")
+        data = array(source, hdf5.child(source, node, "shape"), f"{node.name}/shape")
         if data.size == 2:
-            stated = hdf5.read_real(data).ravel().tolist()
+            stated = read_real(data).ravel().tolist()
     if stated is None:
         raise FileError("the shape of a sparse matrix is missing", expected="shape = (rows, columns)", where=where)
     return _sane_shape(stated, where)
@@ -362,115 +303,3 @@ def _sane_shape(shape: Iterable[float], where: str) -> tuple[int, int]:
 
 def _is_list(value: Any, count: int) -> bool:
     return isinstance(value, list) and len(value) == count and all(type(v) is int for v in value)
-
-
-def _short(stored: Stored) -> str:
-    return stored.where.rsplit("/", 1)[-1]
-
-
-# ---- reading -------------------------------------------------------------------------------------------------------
-
-
-def _from_compressed(stored: Stored) -> Sparse:
-    shape = stored.shape if stored.layout == "CSR" else stored.shape[::-1]
-    index = _index_type(stored)
-    assert stored.major is not None
-    pointers = np.empty(shape[0] + 1, dtype=index)
-    stop = stored.base + stored.count
-    hdf5.read_integers(stored.major, pointers, stored.base, stop, subtract=stored.base, what="pointer")
-    _check_pointers(pointers, stored)
-    minor = _minor(stored, shape[1], index)
-    matrix = sp.csr_array((_values(stored), minor, pointers), shape=shape, copy=False)
-    return matrix if stored.layout == "CSR" else matrix.T.tocsr()
-
-
-def _from_coordinates(stored: Stored) -> Sparse:
-    index = _index_type(stored)
-    stored.source.budget.take(stored.count * (8 + index().itemsize), stored.where)
-    stored.source.budget.take((stored.shape[0] + 1) * index().itemsize, stored.where)
-    assert stored.major is not None
-    rows = np.empty(stored.count, dtype=index)
-    high = stored.base + stored.shape[0] - 1
-    hdf5.read_integers(stored.major, rows, stored.base, high, subtract=stored.base, what="row index")
-    columns = _minor(stored, stored.shape[1], index)
-    return sp.coo_array((_values(stored), (rows, columns)), shape=stored.shape, copy=False).tocsr()
-
-
-def _index_type(stored: Stored) -> Any:
-    return np.int32 if stored.count < 2**31 - 1 else np.int64
-
-
-def _minor(stored: Stored, width: int, index: Any) -> Any:
-    assert stored.minor is not None
-    out = np.empty(stored.count, dtype=index)
-    high = stored.base + width - 1
-    hdf5.read_integers(stored.minor, out, stored.base, high, subtract=stored.base, what="index")
-    return out
-
-
-def _values(stored: Stored) -> Real:
-    values: Real = hdf5.read_real(stored.values, what=f"{_short(stored)} holds values")
-    if stored.iso:
-        stored.source.budget.take(8 * stored.count, stored.where)
-        return np.full(stored.count, values.ravel()[0])
-    return values
-
-
-def _check_pointers(pointers: Any, stored: Stored) -> None:
-    assert stored.major is not None
-    where = stored.major.where
-    if pointers[0] != 0 or pointers[-1] != stored.count:
-        expected = f"first {stored.base}, last {stored.base + stored.count}"
-        got = f"first {pointers[0] + stored.base}, last {pointers[-1] + stored.base}"
-        one = pointers[0] == 1 and pointers[-1] == stored.count
-        remedy = "say index_base = 1 if indices count from 1" if one or pointers[0] == 1 else ""
-        raise FileError("pointers do not span the values", expected=expected, got=got, where=where, remedy=remedy)
-    falls = pointers[1:] < pointers[:-1]
-    if falls.any():
-        at = int(np.argmax(falls))
-        got = f"{pointers[at]} then {pointers[at + 1]} at position {at}"
-        raise FileError("pointers go down", expected="pointers that never fall", got=got, where=where)
-
-
-def _dense_rows(stored: Stored) -> Sparse:
-    """A dense dataset as CSR, a few rows at a time: the zeros never stand in memory together."""
-    blocks = []
-    if len(stored.values.shape) == 1:  # a binsparse dense matrix: rows one after the other
-        return sp.csr_array(hdf5.read_real(stored.values, what=f"{_short(stored)} holds values").reshape(stored.shape))
-    for _, piece in stored.values.pieces():
-        block = np.asarray(piece, dtype=np.float64).reshape(-1, stored.shape[1])
-        hdf5.check_finite(block, stored.values, f"{_short(stored)} holds values", finite=True)
-        blocks.append(sp.csr_array(block))
-    return sp.vstack(blocks, format="csr") if blocks else sp.csr_array(stored.shape)
-
-
-def _both_triangles(half: Sparse, stored: Stored) -> Sparse:
-    """``half + half^T - diag(half)``; explicit zeros stay (a solver may need them on the diagonal)."""
-    n = half.shape[0]
-    rows = np.repeat(np.arange(n, dtype=half.indices.dtype), np.diff(half.indptr))
-    outside = (half.indices > rows) if stored.symmetric == "lower" else (half.indices < rows)
-    if outside.any():
-        at = int(np.argmax(outside))
-        raise ModelError(
-            "entries lie outside the stored triangle",
-            expected=f"the {stored.symmetric} triangle only",
-            got=f"{int(np.count_nonzero(outside))} entries outside, first at ({rows[at]}, {half.indices[at]})",
-            where=stored.where,
-            remedy="leave the attribute symmetric out if both triangles are stored",
-        )
-    off = half.indices != rows
-    mirror = sp.coo_array((half.data[off], (half.indices[off], rows[off])), shape=half.shape).tocsr()
-    del rows, outside, off
-    return _interleaved(half, mirror) if stored.symmetric == "lower" else _interleaved(mirror, half)
-
-
-def _interleaved(left: Sparse, right: Sparse) -> Sparse:
-    """The sum of two CSR arrays, every row of ``left`` wholly left of the same row of ``right``."""
-    pointers = left.indptr.astype(np.int64) + right.indptr
-    total = int(pointers[-1])
-    index = np.int32 if total < 2**31 - 1 else np.int64
-    indices, data = np.empty(total, dtype=index), np.empty(total)
-    for part, shift in ((left, right.indptr[:-1]), (right, left.indptr[1:])):
-        at = np.arange(part.nnz) + np.repeat(shift, np.diff(part.indptr))
-        indices[at], data[at] = part.indices, part.data
-    return sp.csr_array((data, indices, pointers.astype(index)), shape=left.shape, copy=False)

@@ -30,7 +30,8 @@ from modesieve.io.conversion import to_channels, to_seconds
 from modesieve.io.damping_file import DAMPING_ATTRIBUTES, DAMPING_TABLES, read_base, write_base
 from modesieve.io.hdf5 import Node, Source
 from modesieve.io.labels_file import read_channels, read_unknowns, write_channels, write_unknowns
-from modesieve.io.matrices import Place, Stored, locate, read_dense, read_sparse, write_matrix
+from modesieve.io.matrices import Place, Stored, locate
+from modesieve.io.matrix_values import read_dense, read_sparse, write_matrix
 from modesieve.reduce.arrays import DENSE_LIMIT
 from modesieve.reduce.errors import FileError, ModelError, ModesieveError
 from modesieve.reduce.model import (

@@ -15,8 +15,8 @@ import numpy as np
 from modesieve.io import hdf5
 from modesieve.io.atomic import PathLike
 from modesieve.io.hdf5 import Node, Source
+from modesieve.io.hdf5_arrays import array, write_array
 from modesieve.io.labels_file import read_channels, write_channels
-from modesieve.io.matrices import write_array
 from modesieve.io.record_file import check_shapes, read_numbers, read_record, write_record
 from modesieve.reduce.errors import FileError
 from modesieve.reduce.fingerprint import fingerprint
@@ -134,7 +134,7 @@ def _shapes_in(source: Source, name: str) -> Any:
     node = hdf5.child(source, source.file, name)
     if node is None:
         return None
-    data = hdf5.array(source, node)
+    data = array(source, node)
     return read_numbers(source, node, np.complex128 if data.content == "complex" else np.float64, f"/{name}")
 
 

@@ -26,8 +26,8 @@ import numpy as np
 
 from modesieve.io import hdf5
 from modesieve.io.hdf5 import Node, Source
+from modesieve.io.hdf5_arrays import array, read_real, read_texts, write_array
 from modesieve.io.labels_file import write_texts
-from modesieve.io.matrices import write_array
 from modesieve.reduce.errors import FileError, ModesieveError
 from modesieve.reduce.truncation.records import Choice, ReducedModel
 
@@ -206,10 +206,10 @@ def _sized(value: tuple[Any, ...], hint: Any, where: str) -> tuple[Any, ...]:
 
 def read_numbers(source: Source, node: Node, dtype: Any, place: str) -> Any:
     """A dataset of numbers as a read-only array of ``dtype``."""
-    data = hdf5.array(source, node, place)
+    data = array(source, node, place)
     if np.dtype(dtype).kind == "i" and data.dtype.kind not in "iu":
         raise FileError("the dataset has the wrong type", expected="integers", got=str(data.dtype), where=data.where)
-    out = hdf5.read_real(data, dtype=dtype, finite=False, complex_too=np.dtype(dtype).kind == "c")
+    out = read_real(data, dtype=dtype, finite=False, complex_too=np.dtype(dtype).kind == "c")
     out.flags.writeable = False
     return out
 
@@ -245,7 +245,7 @@ def _read_scalar(source: Source, group: Node, name: str, hint: Any) -> Any:
 
 def _read_tuple(source: Source, node: Node, item: Any, place: str) -> tuple[Any, ...]:
     if item is str:
-        return hdf5.read_texts(hdf5.array(source, node, place), _MOST)
+        return read_texts(array(source, node, place), _MOST)
     if item in (int, float):
         return tuple(_list(source, node, item, place))
     if not hdf5.is_group(node):

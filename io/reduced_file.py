@@ -20,7 +20,7 @@ import scipy.sparse as sp
 from modesieve.io import hdf5
 from modesieve.io.atomic import PathLike
 from modesieve.io.hdf5 import Node, Source
-from modesieve.io.matrices import write_array
+from modesieve.io.hdf5_arrays import write_array
 from modesieve.io.model_file import write_model
 from modesieve.io.modes_file import check_format, check_system, group, read_modes, write_table
 from modesieve.io.record_file import check_shapes, read_numbers, read_record, write_record
