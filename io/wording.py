@@ -9,7 +9,7 @@ _PREFIXES = {"n": -9, "µ": -6, "m": -3, "": 0, "k": 3, "M": 6, "G": 9}
 _SYMBOL = {exponent: prefix for prefix, exponent in _PREFIXES.items()}
 #: Units that take prefixes, with the largest that people use with them.
 _LARGEST = {"m": 0, "N": 9, "Pa": 9, "W": 9, "Hz": 9, "J": 9, "V": 6, "A": 3, "K": 0, "rad": 0, "s": 0}
-_FIRST = re.compile(r"(n|u|µ|μ|m|k|M|G)?(m|N|Pa|W|Hz|J|V|A|K|rad|s)(?![A-Za-z0-9^*²³])(.*)", re.DOTALL)
+_FIRST = re.compile(r"(n|u|µ|μ|m|k|M|G)?(m|N|Pa|W|Hz|J|V|A|K|rad|s)(?!\*\*|[A-Za-z0-9^²³])(.*)", re.DOTALL)
 _SUPERSCRIPT = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
 
 
@@ -23,13 +23,14 @@ def format_number(value: float, digits: int = 3) -> str:
         return "undefined" if math.isnan(value) else ("−" if value < 0 else "") + "infinite"
     if value == 0:
         return "0"
-    exponent = int(f"{value:.{digits - 1}e}".split("e")[1])
+    rounded = f"{value:.{digits - 1}e}"
+    exponent = int(rounded.split("e")[1])
     if -4 <= exponent < 6:
-        text = f"{value:.{max(digits - 1 - exponent, 0)}f}"
+        text = f"{float(rounded):.{max(digits - 1 - exponent, 0)}f}"
         text = text.rstrip("0").rstrip(".") if "." in text else text
     else:
-        mantissa = f"{value / 10.0**exponent:.{digits - 1}f}"
-        text = f"{mantissa.rstrip('0').rstrip('.')}e{exponent}"
+        mantissa = rounded.split("e")[0]
+        text = f"{mantissa.rstrip('0').rstrip('.') if '.' in mantissa else mantissa}e{exponent}"
     return text.replace("-", "−")
 
 
