@@ -110,13 +110,13 @@ def whole_axis_error(hub: Hub) -> float:
     """``sup e_H(w)`` over the whole axis: branch and bound to far above the tail, and one bound for all beyond."""
     x = float(hub.terms.x.max(initial=1.0))
     top = 30 * (x if hub.rest.order == 1 else max(np.sqrt(x), 1 / hub.rest.beta, hub.rest.beta * x))
-    edges = np.concatenate([[1e-12 * top], np.geomspace(1e-6 * top, top, 160)])
+    edges = np.concatenate([[1e-12 * top], np.geomspace(1e-6 * top, top, 400)])
 
     def own(left: Real, right: Real) -> tuple[Real, Real]:
         upper, middle = hub_suprema(hub, left, right)
         return upper[:, None], middle[:, None]
 
-    found = suprema(own, edges, share=0.02)[0]
+    found = suprema(own, edges, share=0.05, budget=4000)[0]
     return max(found.value, _beyond(hub, top))
 
 
