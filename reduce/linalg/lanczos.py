@@ -152,7 +152,7 @@ def _count(
 
 
 def _uncounted(pairs: SymmetricPairs, mu: float) -> CountResult:
-    if pairs.status == "converged" and pairs.whole:
+    if pairs.status == "converged" and pairs.complete:
         return CountResult(
             expected=len(pairs), mu=np.inf, reliable=True, reason="all finite modes", solver=pairs.solver
         )

@@ -16,8 +16,8 @@ class SymmetricPairs:
     """Eigenpairs in ascending x. vectors (n, k) are M-orthonormal; residuals (k,) as `residuals` gives them.
 
     factor: the live factor of ``K - sigma M``, None where none was needed. basis: the M-orthonormal Krylov space that
-    the vectors were taken from, for a full response (None from the dense path). whole: every finite mode is here.
-    next_x: estimate of the first eigenvalue beyond the list, inf when ``whole``. negative: eigenvalues below sigma as
+    the vectors were taken from, for a full response (None from the dense path). complete: every finite mode is here.
+    next_x: estimate of the first eigenvalue beyond the list, inf when ``complete``. negative: eigenvalues below sigma as
     far as known. solver names the method; solves counts right-hand sides. status: "converged", or in a word why not;
     message says more.
     """
@@ -28,7 +28,7 @@ class SymmetricPairs:
     sigma: float = 0.0
     factor: Factor | None = field(default=None, repr=False)
     basis: Real | None = field(default=None, repr=False)
-    whole: bool = False
+    complete: bool = False
     next_x: float = np.inf
     negative: int = 0
     solver: str = ""
@@ -47,7 +47,7 @@ class SymmetricPairs:
             return self
         x, next_x = self.x[:k], float(self.x[k])
         vectors, worst = self.vectors[:, :k], self.residuals[:k]
-        return replace(self, x=x, vectors=vectors, residuals=worst, next_x=next_x, whole=False)
+        return replace(self, x=x, vectors=vectors, residuals=worst, next_x=next_x, complete=False)
 
 
 def residuals(K: Sparse, M: Sparse, x: Real, vectors: Real) -> Real:

@@ -275,7 +275,7 @@ class Search:
             sigma=self.sigma,
             factor=self.factor,
             next_x=next_x,
-            whole=not np.isfinite(next_x) and not np.isnan(next_x),
+            complete=not np.isfinite(next_x) and not np.isnan(next_x),
             negative=self.below_sigma or 0,
             solver=f"block Lanczos, {self.factor.solver}",
             solves=self.solves + (self.space.solves if self.space else 0),
