@@ -65,9 +65,9 @@ def output_folder(path: PathLike) -> Path:
     return folder
 
 
-def file_error(error: OSError, path: PathLike) -> FileError:
+def file_error(error: OSError | RuntimeError, path: PathLike) -> FileError:
     """The domain error that says what the operating system's error on writing ``path`` means to a user."""
-    code = error.errno or _hidden_code(error)
+    code = getattr(error, "errno", None) or _hidden_code(error)
     what, expected, remedy = _MEANING.get(code or 0, ("the file cannot be written", "", "write to another place"))
     got = os.strerror(code) if code else str(error)
     return FileError(what, expected=expected, got=got, where=os.fspath(path), remedy=remedy)
@@ -99,9 +99,13 @@ def _explained(path: PathLike) -> Iterator[None]:
         raise
     except OSError as error:
         raise file_error(error, path) from error
+    except RuntimeError as error:
+        if _hidden_code(error) is None:
+            raise
+        raise file_error(error, path) from error  # HDF5 while closing a file that it cannot complete
 
 
-def _hidden_code(error: OSError) -> int | None:
+def _hidden_code(error: BaseException) -> int | None:
     # The HDF5 library hides the system's number in its message.
     found = re.search(r"errno = (\d+)", str(error))
     return int(found[1]) if found else None
