@@ -138,8 +138,8 @@ def _as_places(places: Mapping[str, str | Place]) -> dict[str, Place]:
     known = {m.name for matrices in MATRICES.values() for m in matrices}
     for name in places:
         if name not in known:
-            close = difflib.get_close_matches(name, sorted(known), 2)
-            remedy = "did you mean " + " or ".join(close) + "?" if close else ""
+            close = difflib.get_close_matches(name, sorted(known), 1)
+            remedy = f"did you mean {close[0]}?" if close else ""
             got = repr(name)
             raise FileError("there is no matrix of this name", expected="a matrix name", got=got, remedy=remedy)
     return {name: Place(path=place) if isinstance(place, str) else place for name, place in places.items()}
