@@ -22,7 +22,15 @@ POWER: Dimension = (("[length]", 2.0), ("[mass]", 1.0), ("[time]", -3.0))
 MOMENT: Dimension = (("[length]", 2.0), ("[mass]", 1.0), ("[time]", -2.0))
 _BASES = {"length": LENGTH, "mass": MASS, "force": FORCE, "time": TIME, "temperature": TEMPERATURE}
 _EXAMPLES = {"length": "mm", "mass": "t", "force": "N", "time": "s", "temperature": "K"}
-_NATURE = {FORCE: "a force", MOMENT: "a moment", POWER: "a heat flow", TEMPERATURE: "a temperature", LENGTH: "a length"}
+_NATURE = {
+    MASS: "a mass",
+    TIME: "a time",
+    FORCE: "a force",
+    MOMENT: "a moment",
+    POWER: "a heat flow",
+    TEMPERATURE: "a temperature",
+    LENGTH: "a length",
+}
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -158,9 +166,9 @@ def _check_nature(channel: Input | Output, u: Unit, meaning: Meaning, where: str
     raise UnitError(
         f"channel {channel.name} has a unit of something else",
         expected=f"{wanted}: {meaning.noun}",
-        got=f"{channel.unit}, {_name_of(u.dimension)}",
+        got=f"{channel.unit}, {'a ratio' if u.is_ratio else _name_of(u.dimension)}",
         where=where,
-        remedy='correct the unit; if the matrix itself holds this unit, say channel_units = "channels"',
+        remedy=_NATURE_REMEDY if channel.unit != "g" else 'write "g0" for standard gravity',
     )
 
 
@@ -174,6 +182,9 @@ def _check_power(channel: Input | Output, u: Unit, scale: Scale, where: str) -> 
             where=where,
             remedy="leave unit_mass and unit_force out if the matrices hold watts",
         )
+
+
+_NATURE_REMEDY = 'correct the unit; if the matrix itself holds this unit, say channel_units = "channels"'
 
 
 def _not_convertible(channel: Input | Output, u: Unit, where: str) -> UnitError:
