@@ -9,7 +9,6 @@ import numpy as np
 
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.comparison.records import Check
-from modesieve.reduce.errors import SolveError
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.response.deviation import Yardstick, largest_pairs, phase_error
 from modesieve.reduce.response.grid import has_integrators
@@ -32,12 +31,10 @@ def dc_gain(modes: Modes, solve: Solver, full: FullResponse) -> DcGain:
     if has_integrators(modes):
         names = sorted({reason for reason in modes.always_kept if reason in ("rigid body", "integrating")})
         return DcGain(G=None, reason=f"none, integrates ({' and '.join(names)} modes)")
-    if full.omega[0] == 0:
-        return DcGain(G=full.G[0].real)
-    try:
-        return DcGain(G=solve(np.zeros(1)).G[0].real)
-    except SolveError as error:
-        return DcGain(G=None, reason=f"none, the full model cannot be solved at 0: {error.what}")
+    at_zero = full if full.omega[0] == 0 else solve(np.zeros(1))
+    if len(at_zero.omega) == 0:
+        return DcGain(G=None, reason="none, the full model is singular at 0")
+    return DcGain(G=at_zero.G[0].real)
 
 
 def check_of(yard: Yardstick, small: ReducedModel, label: str, certainty: Certainty, gain: DcGain) -> Check:

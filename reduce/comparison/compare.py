@@ -72,6 +72,7 @@ def compare(
     """
     smalls = tuple(smalls)
     _same_channels(model, smalls)
+    _ported(model)
     setting = _setting(model, smalls, modes, band, omega, progress)
     tell(progress, "compare", message="full response")
     full, notes = _full(setting, smalls, omega, full)
@@ -127,6 +128,17 @@ def _same_channels(model: Model, smalls: tuple[ReducedModel, ...]) -> None:
             )
 
 
+def _ported(model: Model) -> None:
+    if 0 in (model.p, model.m):
+        raise ChoiceError(
+            "the model has no response to compare",
+            expected="at least one input and one output",
+            got=f"{model.m} inputs and {model.p} outputs",
+            where=model.source,
+            remedy="give the model loads and outputs",
+        )
+
+
 def _setting(
     model: Model,
     smalls: tuple[ReducedModel, ...],
@@ -135,7 +147,10 @@ def _setting(
     omega: Real | None,
     progress: Listener,
 ) -> _Setting:
-    chosen = _furthest(model, [m for m in (modes, *(small.modes for small in smalls)) if m is not None], modes)
+    mark = fingerprint(model)
+    _own(modes, mark, model)
+    candidates = [m for m in (modes, *(small.modes for small in smalls)) if m is not None]
+    chosen = _furthest(model, [m for m in candidates if m.origin.fingerprint == mark], modes)
     around = _band(smalls, band, omega, chosen)
     if chosen is None:
         if around is None:
@@ -149,7 +164,7 @@ def _setting(
     around = around or default_band(chosen)
     if around is None:
         raise ChoiceError("nothing says where to compare", expected="a band", got="none", remedy="give one")
-    notes = (*_strangers(model, smalls), *_other_counts(model, smalls, chosen))
+    notes = (*_strangers(mark, smalls), *_other_counts(model, smalls, chosen))
     return _Setting(model=model, modes=chosen, band=around, solve=full_solver(model, chosen, progress), notes=notes)
 
 
@@ -189,10 +204,18 @@ def _band(
     return None if modes is None else default_band(modes)
 
 
-def _strangers(model: Model, smalls: tuple[ReducedModel, ...]) -> list[str]:
-    if not smalls:
-        return []
-    mark = fingerprint(model)
+def _own(modes: Modes | None, mark: str, model: Model) -> None:
+    if modes is not None and modes.origin.fingerprint != mark:
+        raise ChoiceError(
+            "these are the modes of another model",
+            expected=f"modes of {model.title or 'the model'} (fingerprint {mark[:12]})",
+            got=f"fingerprint {modes.origin.fingerprint[:12]}",
+            where=modes.origin.source,
+            remedy="compute the modes again, or leave them out",
+        )
+
+
+def _strangers(mark: str, smalls: tuple[ReducedModel, ...]) -> list[str]:
     other = [i + 1 for i, small in enumerate(smalls) if small.modes.origin.fingerprint != mark]
     return [
         f"small model {i} was cut from another full model (other fingerprint): its error includes the difference"
@@ -229,7 +252,10 @@ def _full(
         return _finite(full, setting)
     if omega is not None:
         wanted, notes = _without_zero(_checked_omega(omega), setting.modes)
-        return setting.solve(wanted), notes
+        full = _solved(setting, wanted, ())
+        lost = len(wanted) - len(full.omega)
+        singular = [f"{lost} frequencies left out: the full model is singular there"] if lost else []
+        return full, [*notes, *singular]
     wanted = _grid(setting, smalls)
     notes = [_ZERO] if setting.band[0] == 0 and has_integrators(setting.modes) else []
     full = _solved(setting, wanted, smalls)
@@ -272,19 +298,29 @@ def _solved(setting: _Setting, omega: Real, smalls: tuple[ReducedModel, ...]) ->
         s.samples for s in smalls if s.samples is not None and s.modes is setting.modes and s.modes.vectors is not None
     ]
     if not known:
-        return setting.solve(omega)
+        return _some(setting.solve(omega))
     had = joined(known)
     had = picked(had, np.isin(had.omega, omega))
     rest = np.setdiff1d(omega, had.omega)
     return joined([had, setting.solve(rest)]) if rest.size else had
 
 
+def _some(full: FullResponse) -> FullResponse:
+    if len(full.omega) == 0:
+        raise ChoiceError(
+            "the full model has no finite response at any of the frequencies",
+            expected="a regular dynamic stiffness",
+            got="singular ones, as at an undamped mode",
+            remedy="give the model damping, or other frequencies",
+        )
+    return full
+
+
 def _finite(full: FullResponse, setting: _Setting) -> tuple[FullResponse, list[str]]:
     good = np.isfinite(full.G).all(axis=(1, 2))
     if has_integrators(setting.modes):
         good &= full.omega != 0
-    if not good.any():
-        raise ChoiceError("the given response has no finite frequency", expected="finite values", got="none")
+    _some(picked(full, good))
     return (full, []) if good.all() else (picked(full, good), [_ZERO])
 
 

@@ -16,7 +16,7 @@ from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.model import Model, Structure
 from modesieve.reduce.progress import Listener, tell
 from modesieve.reduce.report import hertz
-from modesieve.reduce.response.deviation import Yardstick, joined, yardstick
+from modesieve.reduce.response.deviation import Yardstick, joined, picked, yardstick
 from modesieve.reduce.response.grid import clear_of, densified, frequency_grid, has_integrators, undamped_omega
 from modesieve.reduce.response.norms import largest_singular_value
 from modesieve.reduce.response.records import FullResponse
@@ -54,7 +54,10 @@ def solver_of(modes: Modes, progress: Listener = None) -> Solver:
 
 
 def full_solver(model: Model, modes: Modes, progress: Listener = None) -> Solver:
-    """``model`` as a function of omega. Modal damping needs the vectors of ``modes``: computed again if absent."""
+    """``model`` as a function of omega. Modal damping needs the vectors of ``modes``: computed again if absent.
+
+    Frequencies where the model is singular (an undamped mode exactly there) are left out of what it returns.
+    """
     from modesieve.reduce.response.full import full_response
 
     if modes.vectors is None and is_modal(model):
@@ -62,7 +65,13 @@ def full_solver(model: Model, modes: Modes, progress: Listener = None) -> Solver
 
         modes = find_modes(model, count=len(modes), progress=progress)
     helpful = modes if modes.vectors is not None else None
-    return lambda omega: full_response(model, omega, modes=helpful, progress=progress)
+    return lambda omega: finite(full_response(model, omega, modes=helpful, progress=progress))
+
+
+def finite(full: FullResponse) -> FullResponse:
+    """``full`` without the frequencies where it is not finite."""
+    good = np.isfinite(full.G).all(axis=(1, 2))
+    return full if good.all() else picked(full, good)
 
 
 def is_modal(model: Model) -> bool:

@@ -54,8 +54,8 @@ def truncate(
     Band, Keep, Tolerance or a tuple of Above (any of them suffices). statics: "none", "feedthrough" (adds the exact
     static remainder X of everything dropped), "vectors" (adds pseudo-modes, ``levels`` tail levels of them: exact
     statics for every kind of output), None: feedthrough where it is legal for all outputs, else none. band (rad/s):
-    where the error is measured; by default the ranking's, the choice's own, or 0 to the counted range over 1.5 (not for a
-    Tolerance, which needs a stated band). full: a response of the full model to measure on, else computed here.
+    where the error is measured; by default the ranking's, the choice's own, or 0 to the counted range over 1.5 (not for
+    a Tolerance, which needs a stated band). full: a response of the full model to measure on, else computed here.
 
     Always-kept modes (rigid-body, integrating, unstable) are kept whatever the choice, and count. The notes of the
     result say what was added or taken fewer.
@@ -209,7 +209,15 @@ def _first_samples(
         return _within(full, band)
     assert solve is not None
     told(progress, "full response")
-    return solve(grid_for(modes, band))
+    full = solve(grid_for(modes, band))
+    if len(full.omega) == 0:
+        raise ChoiceError(
+            "the full model is singular all over the band",
+            expected="a regular dynamic stiffness",
+            got=f"{len(grid_for(modes, band))} singular frequencies",
+            remedy="check the stiffness matrix with inspect",
+        )
+    return full
 
 
 def _within(full: FullResponse, band: tuple[float, float]) -> FullResponse:

@@ -274,6 +274,9 @@ def test_other_channels_are_refused_and_another_model_is_named() -> None:
     assert fingerprint(longer) != modes.origin.fingerprint
     result = compare(longer, [small], modes=find_modes(longer, count=8))
     assert any("another full model" in note for note in result.warnings)
+    assert compare(longer, [small]).modes.origin.n == 17  # its own modes are found, not the small model's taken
+    with pytest.raises(ChoiceError, match="modes of another model"):
+        compare(longer, [small], modes=modes)
 
 
 def test_step_and_impulse_tend_to_the_static_response_and_zero() -> None:

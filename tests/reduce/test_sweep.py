@@ -14,6 +14,7 @@ from modesieve.reduce.modal.find import find_modes
 from modesieve.reduce.modal.rank import rank
 from modesieve.reduce.model import Damping, LossFactor, Rayleigh, StateSpace, Structure, Thermal
 from modesieve.reduce.response.full import full_response
+from modesieve.reduce.response.grid import frequency_grid
 from modesieve.reduce.truncation import Count, truncate
 from modesieve.reduce.truncation.choice import sequence
 from modesieve.reduce.truncation.gauge import yardstick_for
@@ -48,8 +49,13 @@ def test_each_count_agrees_with_a_model_cut_to_it(model: Any) -> None:
     modes = find_modes(model, count=12)
     table = rank(modes, band=band)
     cuts = [int(c) for c in sequence(modes, table).cuts if c > 0]
-    smalls = [truncate(table, Count(modes=c), statics=s) for s in ("none", "feedthrough") for c in cuts]  # type: ignore[arg-type]
-    result = compare(model, smalls, modes=modes, band=band)
+    full = full_response(model, frequency_grid(modes, band, base=30), modes=modes)
+    smalls = [
+        truncate(table, Count(modes=c), statics=s, full=full)  # type: ignore[arg-type]
+        for s in ("none", "feedthrough")
+        for c in cuts
+    ]
+    result = compare(model, smalls, modes=modes, band=band, full=full)
     sweep = result.sweep
     assert sweep is not None
     assert sweep.kept.tolist() == cuts

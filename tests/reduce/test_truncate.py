@@ -259,9 +259,10 @@ def test_a_symmetric_square_is_not_cut_inside_a_pair() -> None:
     """Every legal count of a membrane keeps both coupled members of each pair."""
     modes = find_modes(square(), (0.0, 2.5))
     table = rank(modes, band=(0.5, 2.5))
+    full = full_response(square(), np.linspace(0.5, 2.5, 9), modes=modes)
     for count in range(1, len(modes) + 1):
         try:
-            small = truncate(table, Count(modes=count))
+            small = truncate(table, Count(modes=count), full=full)
         except ChoiceError:
             continue
         for group in groups(modes):
@@ -459,7 +460,7 @@ def test_the_samples_are_refined_where_the_error_peaks_between_them() -> None:
     band = (0.01, 0.35)
     modes = find_modes(model, count=14)
     small = truncate(rank(modes, band=band), Count(modes=4), statics="none")
-    dense = full_response(model, np.linspace(*band, 4000), modes=modes)
+    dense = full_response(model, np.linspace(*band, 2000), modes=modes)
     assert small.error is not None
     assert worst_local(model, small, dense, small.error.threshold or 0.0) < 1.05 * small.error.value
 
@@ -557,7 +558,7 @@ def test_a_given_response_is_used() -> None:
         truncate(modes, Keep(numbers=(1,)), band=(5.0, 6.0), full=full)
 
 
-@settings(max_examples=8, deadline=None, derandomize=True)
+@settings(max_examples=5, deadline=None, derandomize=True)
 @given(seed=st.integers(0, 1000))
 def test_order_and_scale_of_channels_and_unknowns_change_nothing(seed: int) -> None:
     """Permuted unknowns, inputs and outputs, and channels in other units: the same modes, the same error."""
@@ -636,7 +637,7 @@ def test_a_tolerance_with_vectors_needs_fewer_modes() -> None:
 
 def test_vectors_need_real_uncoupled_modes() -> None:
     """A state-space model has no tail vectors: the refusal says what would."""
-    with pytest.raises(ChoiceError, match="structure without local damping|real, uncoupled modes|full model"):
+    with pytest.raises(ChoiceError, match="full model and the mode shapes"):
         truncate(blocks_by_hand(), Keep(numbers=(1,)), statics="vectors")
 
 
