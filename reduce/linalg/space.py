@@ -9,7 +9,6 @@ import numpy as np
 from scipy.linalg import eigh
 
 from modesieve.reduce.arrays import Real, Sparse
-from modesieve.reduce.linalg.dense import orthonormalise
 from modesieve.reduce.linalg.factor import Factor
 
 
@@ -36,7 +35,7 @@ class KrylovSpace:
         self.held = 0  # columns of V with Q at the end
         self.S = np.zeros((0, 0))
         self.solves = 0
-        self._MQ = self._R = np.zeros((n, 0))
+        self._MQ = np.zeros((n, 0))
 
     @property
     def V(self) -> Real:
@@ -78,17 +77,21 @@ class KrylovSpace:
     def expand(self) -> None:
         """Multiply the newest block by the operator, orthogonalise, take the rest as the next block."""
         a, b = self.done, self.held
-        W = np.asfortranarray(self.solve(self._MQ))
-        H, MW, size = self._orthogonalise(W)
+        W, H, size = self._orthogonalise(np.asfortranarray(self.solve(self._MQ)))
         self.done = b
-        Q, R, more = self._normalise(W, MW, size)
+        Q, R, more = self._normalise(W, size)
         H += more @ R
         self._T[:b, a:b] = H
         self._T[a:b, :b] = H.T
         self._T[a:b, a:b] = (H[a:b] + H[a:b].T) / 2
-        self._take(Q, R, size)
+        self._store(Q)
+        short = min(self.block - Q.shape[1], self.M.shape[0] - self.held)
+        if short > 0:  # directions that were nothing but rounding make room for random ones
+            MQ = self._MQ
+            self._append(self._random(short))
+            self._MQ = np.concatenate([MQ, self._MQ], axis=1)
         self.S = np.zeros((self.held - b, b))
-        self.S[: len(self._R), a:b] = self._R
+        self.S[: len(R), a:b] = R
 
     def ritz(self) -> Ritz:
         """Ritz pairs of the multiplied space."""
@@ -117,62 +120,46 @@ class KrylovSpace:
         return self.solve(self.M @ self.rng.standard_normal((self.M.shape[0], count)))
 
     def _orthogonalise(self, W: Real) -> tuple[Real, Real, Real]:
-        """Take the basis out of W in place, twice; returns the coefficients, about MW, and the M-norms before."""
+        """W without the basis (twice is enough), the coefficients taken out, and the M-norms before."""
         V = self.everything
         MW = self.M @ W
-        size = np.sqrt(np.maximum(np.einsum("ij,ij->j", W, MW), 0.0))
+        size = _norms(W, MW)
         H = V.T @ MW
-        W -= V @ H
-        MW = self.M @ W
-        again = V.T @ MW
-        W -= V @ again
-        return H + again, MW, size
+        W = W - V @ H
+        again = V.T @ (self.M @ W)
+        return W - V @ again, H + again, size
 
-    def _normalise(self, W: Real, MW: Real, size: Real) -> tuple[Real, Real, Real]:
-        """W = Q R + V h R with Q M-orthonormal and orthogonal to V; returns Q, R, h. Sets MQ."""
-        Q, _, R = orthonormalise(W, MW)
-        Q, MQ, R2 = orthonormalise(Q, self.M @ Q)
-        R, h = R2 @ R, np.zeros((self.held, W.shape[1]))
-        if _smallest(R) < 1e-3 * float(np.max(size, initial=0.0)):  # cancellation: rounding along V was enlarged
-            h = self.everything.T @ MQ
-            Q, MQ, R2 = orthonormalise(*self._again(Q, h))
-            h = h @ np.linalg.inv(R2)
-            R = R2 @ R
-        self._MQ = MQ
-        return Q, R, h
+    def _normalise(self, W: Real, size: Real) -> tuple[Real, Real, Real]:
+        """``W = (Q + V h) R`` with Q M-orthonormal and orthogonal to V; a column that is rounding of ``size`` is dropped.
 
-    def _again(self, Q: Real, h: Real) -> tuple[Real, Real]:
-        Q = Q - self.everything @ h
-        return Q, self.M @ Q
-
-    def _take(self, Q: Real, R: Real, size: Real) -> None:
-        """Store what of the next block is real; random vectors replace directions that are nothing but rounding."""
-        real = np.linalg.norm(R, axis=1) > 1e-14 * float(np.max(size, initial=0.0))
-        self._R = R[real]
-        self._store(Q[:, real], self._MQ[:, real])
-        short = min(self.block - int(real.sum()), self.M.shape[0] - self.held)
-        if short > 0:
-            MQ = self._MQ
-            self._append(self._random(short))
-            self._MQ = np.concatenate([MQ, self._MQ], axis=1)
+        Column by column inside the block: a Gram matrix would enlarge rounding where a column all but vanishes, as it
+        does when an input's static response is itself a mode.
+        """
+        Q, R = np.zeros((W.shape[0], 0)), np.zeros((0, W.shape[1]))
+        for j in range(W.shape[1]):
+            w, c = _without(W[:, j : j + 1], Q, self.M)
+            length = float(_norms(w, self.M @ w)[0])
+            R[:, j] = c[:, 0]
+            if length > 1e-12 * float(size[j]):
+                R = np.vstack([R, np.zeros((1, W.shape[1]))])
+                R[-1, j] = length
+                Q = np.hstack([Q, w / length])
+        h = self.everything.T @ (self.M @ Q)
+        Q, _ = _without(Q - self.everything @ h, self.everything, self.M)
+        return Q / _norms(Q, self.M @ Q), R, h
 
     def _append(self, W: Real) -> None:
         """Add what is new in W as (part of) the next block."""
-        W = np.array(W, order="F")
-        if W.shape[1] == 0:
-            self._MQ = np.zeros(W.shape)
-            return
-        _, MW, size = self._orthogonalise(W)
-        Q, R, _ = self._normalise(W, MW, size)
-        real = np.linalg.norm(R, axis=1) > 1e-10 * float(np.max(size, initial=0.0))
-        self._store(Q[:, real], self._MQ[:, real])
+        W, _, size = self._orthogonalise(np.asfortranarray(W))
+        Q, _, _ = self._normalise(W, size)
+        self._store(Q)
 
-    def _store(self, Q: Real, MQ: Real) -> None:
+    def _store(self, Q: Real) -> None:
         k = Q.shape[1]
         self._room(self.held + k)
         self._V[:, self.held : self.held + k] = Q
         self.held += k
-        self._MQ = MQ
+        self._MQ = self.M @ Q
 
     def _room(self, columns: int) -> None:
         have = self._V.shape[1]
@@ -185,5 +172,15 @@ class KrylovSpace:
         self._V, self._T = V, T
 
 
-def _smallest(R: Real) -> float:
-    return float(np.linalg.norm(R, axis=1).min()) if R.size else np.inf
+def _norms(W: Real, MW: Real) -> Real:
+    """M-norms of the columns of W."""
+    return np.sqrt(np.maximum(np.einsum("ij,ij->j", W, MW), 0.0))
+
+
+def _without(W: Real, basis: Real, M: Sparse) -> tuple[Real, Real]:
+    """W made M-orthogonal to ``basis``, twice, and the coefficients taken out."""
+    total = np.zeros((basis.shape[1], W.shape[1]))
+    for _ in range(2):
+        c = basis.T @ (M @ W)
+        W, total = W - basis @ c, total + c
+    return W, total
