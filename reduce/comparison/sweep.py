@@ -74,7 +74,8 @@ def _weighted_terms(system: SmallSystem, channels: Interface) -> SmallSystem:
     a, r = channels.amplitudes, channels.resolutions[:, None]
     nothing = np.zeros_like(system.D)
     if isinstance(system, FirstOrderModal):
-        return replace(system, B=system.B * a, C=system.C / r, D=nothing)
+        direct = None if system.direct is None else channels.weigh(system.direct)
+        return replace(system, B=system.B * a, C=system.C / r, D=nothing, direct=direct)
     rows = {name: getattr(system, name) / r for name in ("cq", "cv", "ca")}
     return replace(system, b=system.b * a, D=nothing, X=nothing, **rows)
 

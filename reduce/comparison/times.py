@@ -55,5 +55,5 @@ def _notes(kind: str, modes: Modes, full: SmallSystem, smalls: tuple[ReducedMode
 
 def _has_feedthrough(system: SmallSystem) -> bool:
     if isinstance(system, FirstOrderModal):
-        return bool(np.any(system.D))
+        return bool(np.any(system.feedthrough))
     return bool(np.any(system.D) or np.any(system.X) or np.any(system.ca))

@@ -4,7 +4,7 @@ Two forms, both real and both evaluated as a sum of terms, so that dropping a te
 
 second order   G(s) = D + X/(1 + j eta_X) + sum_i c_i(s) b_i^T / (x_i (1 + j eta_i sgn w) + s d_i + s^2),
                c_i(s) = cq_i + s cv_i + s^2 ca_i
-first order    G(s) = D + sum_i C_i (s I - A_i)^-1 B_i, A_i a real block (1 x 1: real pole, 2 x 2: complex pair,
+first order    G(s) = D + sum_i C_i (s I - A_i)^-1 B_i + D_i, A_i a real block (1 x 1: real pole, 2 x 2: complex pair,
                larger: a group of eigenvalues that only makes sense together)
 """
 
@@ -121,20 +121,22 @@ class SecondOrderModal:
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class FirstOrderModal:
-    """Real block modal form: ``x_i' = A_i x_i + B_i u``, ``y = sum C_i x_i + D u``.
+    """Real block modal form: ``x_i' = A_i x_i + B_i u``, ``y = sum (C_i x_i + D_i u) + D u``.
 
     blocks: the real square A_i, in 1/s; a complex pair is ``[[re, im], [-im, re]]``; B (r, m) and C (p, r) stack the
-    blocks' rows and columns in order; D (p, m).
+    blocks' rows and columns in order; D (p, m). direct (terms, p, m): the D_i that belong to the terms and go with
+    them, as those of velocity and acceleration outputs; None where there are none.
     """
 
     blocks: tuple[Real, ...]
     B: Real
     C: Real
     D: Real
+    direct: Real | None = None
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "blocks", tuple(frozen(np.asarray(a, dtype=np.float64)) for a in self.blocks))
-        for name in ("B", "C", "D"):
+        for name in ("B", "C", "D") if self.direct is None else ("B", "C", "D", "direct"):
             object.__setattr__(self, name, frozen(np.asarray(getattr(self, name), dtype=np.float64)))
 
     @property
@@ -191,20 +193,26 @@ class FirstOrderModal:
     @np.errstate(divide="ignore", invalid="ignore")
     def term_response(self, omega: Real, term: int) -> Complex:
         """Contribution of one term, shape (w, p, m)."""
-        return self.C[:, self.states_of(term)] @ self.resolvent(omega, term)
+        moving = self.C[:, self.states_of(term)] @ self.resolvent(omega, term)
+        return moving if self.direct is None else moving + self.direct[term]
+
+    @property
+    def feedthrough(self) -> Real:
+        """``D + sum_i D_i``, shape (p, m): what answers an input at once."""
+        return self.D if self.direct is None else self.D + self.direct.sum(axis=0)
 
     @np.errstate(divide="ignore", invalid="ignore")
     def response(self, omega: Real) -> Complex:
         """``G(j w)``, shape (w, p, m); not finite where an undamped pole sits exactly on a frequency."""
         single = np.array([len(a) == 1 for a in self.blocks], dtype=bool)
         rows = self.offsets[:-1][single]
-        G = self.through(omega).copy()
+        G = np.broadcast_to(self.feedthrough.astype(complex), (len(omega), *self.D.shape)).copy()
         if rows.size:
             lam = np.array([self.blocks[i][0, 0] for i in np.flatnonzero(single)])
             gain = 1.0 / (1j * np.asarray(omega, dtype=float)[:, None] - lam)
             G += (self.C[:, rows] * gain[:, None, :]) @ self.B[rows]
         for term in np.flatnonzero(~single):
-            G += self.term_response(omega, int(term))
+            G += self.C[:, self.states_of(term)] @ self.resolvent(omega, int(term))
         return G
 
     def select(self, keep: Ints) -> FirstOrderModal:
@@ -212,12 +220,15 @@ class FirstOrderModal:
         keep = np.asarray(keep, dtype=int)
         spans = [np.arange(self.offsets[i], self.offsets[i + 1]) for i in keep]
         rows = np.concatenate([np.zeros(0, dtype=int), *spans]).astype(int)
-        return replace(self, blocks=tuple(self.blocks[i] for i in keep), B=self.B[rows], C=self.C[:, rows])
+        direct = None if self.direct is None else self.direct[keep]
+        return replace(
+            self, blocks=tuple(self.blocks[i] for i in keep), B=self.B[rows], C=self.C[:, rows], direct=direct
+        )
 
     def state_space(self) -> tuple[Real, Real, Real, Real]:
         """(A, B, C, D) with A block diagonal."""
         A = block_diag(*self.blocks) if self.blocks else np.zeros((0, 0))
-        return A, self.B, self.C, self.D
+        return A, self.B, self.C, self.feedthrough
 
 
 SmallSystem: TypeAlias = SecondOrderModal | FirstOrderModal

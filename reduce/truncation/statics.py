@@ -118,7 +118,8 @@ def static_terms(modes: Modes) -> Real:
 def _static_term(system: SmallSystem, i: int) -> Real:
     if isinstance(system, FirstOrderModal):
         rows = system.states_of(i)
-        return np.asarray(-system.C[:, rows] @ np.linalg.solve(system.blocks[i], system.B[rows]))
+        moving = np.asarray(-system.C[:, rows] @ np.linalg.solve(system.blocks[i], system.B[rows]))
+        return moving if system.direct is None else moving + system.direct[i]
     return np.outer(system.cq[:, i], system.b[i]) / system.x[i]
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -88,3 +90,17 @@ def test_an_undamped_resonance_is_infinite_without_a_warning() -> None:
     """A frequency exactly on an undamped pole gives an infinite response, not an exception."""
     one = FirstOrderModal(blocks=(np.array([[0.0]]),), B=[[1.0]], C=[[1.0]], D=[[0.0]])
     assert not np.isfinite(one.response(np.array([0.0]))[0, 0, 0])
+
+
+def test_direct_parts_go_with_their_terms() -> None:
+    """A first-order term's own feedthrough is in its response, in the sum and in the state space; dropping drops it."""
+    base, rng = first_order(3), np.random.default_rng(4)
+    direct = rng.normal(size=(base.terms, 3, 2))
+    system = replace(base, direct=direct)
+    shift = direct.sum(axis=0)
+    np.testing.assert_allclose(system.response(OMEGA), base.response(OMEGA) + shift, atol=1e-13)
+    np.testing.assert_allclose(system.term_response(OMEGA, 1), base.term_response(OMEGA, 1) + direct[1], atol=1e-13)
+    np.testing.assert_allclose(system.through(OMEGA), base.through(OMEGA), atol=0)
+    np.testing.assert_allclose(system.state_space()[3], base.D + shift, atol=1e-13)
+    some = system.select(np.array([2, 0]))
+    np.testing.assert_allclose(some.feedthrough, base.D + direct[2] + direct[0], atol=1e-13)
