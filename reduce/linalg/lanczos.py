@@ -17,7 +17,7 @@ from modesieve.reduce.linalg.count import CountResult, count_below, gap_above
 from modesieve.reduce.linalg.factor import Factor, SolverName
 from modesieve.reduce.linalg.goal import Goal
 from modesieve.reduce.linalg.pairs import SymmetricPairs
-from modesieve.reduce.linalg.search import Search, refuse_too_many
+from modesieve.reduce.linalg.search import BLOCK_COUNTED, Search, refuse_too_many
 from modesieve.reduce.progress import Listener, tell
 
 #: Up to this many unknowns every pair is computed densely.
@@ -94,7 +94,10 @@ def certified_pairs(
     size are solved whole by LAPACK and returned whole.
     """
     goal = Goal(count=count, below=below)
-    search = Search(K, M, start=start, solver=solver, groups=groups, seed=seed, progress=progress, memory=memory_bytes)
+    search = Search(
+        K, M, start=start, solver=solver, groups=groups, seed=seed, progress=progress, memory=memory_bytes,
+        block=BLOCK_COUNTED,
+    )  # fmt: skip
     if sigma is not None:
         search.shift(sigma)
     if search.n <= (dense_limit or 0) or goal.everything:

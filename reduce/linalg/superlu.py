@@ -179,7 +179,9 @@ def _node_order(graph: Any) -> Ints:
 
 def _prepare(A: Sparse, order: Ints) -> Any:
     """The permuted matrix as CSC with the 32-bit indices that SuperLU takes."""
-    P = sp.csr_array(A)[order][:, order].tocsc()
+    A = sp.csr_array(A)
+    # Indexing sorts the rows of its operand in place, and that may be the caller's matrix.
+    P = (A if A.has_sorted_indices else A.sorted_indices())[order][:, order].tocsc()
     P.sort_indices()
     return sp.csc_array((P.data, P.indices.astype(np.int32), P.indptr.astype(np.int32)), shape=P.shape)
 
