@@ -167,6 +167,7 @@ def _assemble(model: Structure | Thermal, shapes: _Shapes, massless: Real, certi
         vectors=phi,
         effective_mass=masses,
         total_mass=total,
+        uniform=phi.T @ (model.E @ np.ones(model.n)) if isinstance(model, Thermal) else None,
         warnings=tuple(warnings),
     )
     return in_order(modes)
@@ -259,5 +260,6 @@ def in_order(modes: Modes) -> Modes:
         always_kept=tuple(modes.always_kept[i] for i in order),
         vectors=modes.vectors[:, order],
         effective_mass=None if modes.effective_mass is None else modes.effective_mass[order],
+        uniform=None if modes.uniform is None else modes.uniform[order],
         **moved,
     )

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from modesieve.reduce.arrays import Real
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.modal.records import Modes, Ranking
 from modesieve.reduce.progress import Listener
@@ -80,9 +81,17 @@ def truncate(
         band=around,
         error=measured.figure,
         samples=measured.full,
+        uniform=_uniform(modes, kept.numbers, make.statics),
         notes=(*_why_none(modes, statics), *make.notes(kept.numbers, around), *kept.notes, *measured.notes),
         ranking=table,
     )
+
+
+def _uniform(modes: Modes, kept: tuple[int, ...], statics: str) -> Real | None:
+    """The kept share of a uniform field; pseudo-modes have no share that is known here."""
+    if modes.uniform is None or statics == "vectors":
+        return None
+    return modes.uniform[np.asarray(kept, dtype=int) - 1]
 
 
 def _parts(ranking: Ranking | Modes, choice: Choice, band: tuple[float, float] | None) -> tuple[Modes, Ranking | None]:
