@@ -80,7 +80,7 @@ def _with_high_end(K: Sparse, M: Sparse, x: Real, vectors: Real) -> tuple[Real, 
 
 
 def _condensed_pairs(K: Real, M: Real) -> tuple[Real, Real]:
-    """All pairs by `eigh` after massless rows s are condensed: ``K_mm - K_ms K_ss^-1 K_sm``. LinAlgError if it fails."""
+    """All pairs by `eigh` after massless rows s are condensed: ``K_mm - K_ms K_ss^-1 K_sm``. Raises LinAlgError."""
     with_mass = np.abs(M).sum(axis=1) > 0
     m, s = np.flatnonzero(with_mass), np.flatnonzero(~with_mass)
     T = -np.linalg.solve(K[np.ix_(s, s)], K[np.ix_(s, m)]) if s.size else np.zeros((0, m.size))

@@ -17,8 +17,8 @@ class SymmetricPairs:
 
     factor: the live factor of ``K - sigma M``, None where none was needed. basis: the M-orthonormal Krylov space that
     the vectors were taken from, for a full response (None from the dense path). complete: every finite mode is here.
-    next_x: estimate of the first eigenvalue beyond the list, inf when ``complete``. negative: eigenvalues below sigma as
-    far as known. solver names the method; solves counts right-hand sides. status: "converged", or in a word why not;
+    next_x: estimate of the first eigenvalue beyond the list, inf when ``complete``. negative: eigenvalues below sigma,
+    as far as known. solver names the method; solves counts right-hand sides. status: "converged", or in a word why not;
     message says more.
     """
 

@@ -9,7 +9,11 @@ import numpy as np
 from scipy.linalg import eigh
 
 from modesieve.reduce.arrays import Real, Sparse
+from modesieve.reduce.linalg.dense import orthonormalise
 from modesieve.reduce.linalg.factor import Factor
+
+#: Below this share of its size before, what is left of a column is treated with care (one by one, dropped if rounding).
+CAREFUL = 1e-4
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -77,9 +81,9 @@ class KrylovSpace:
     def expand(self) -> None:
         """Multiply the newest block by the operator, orthogonalise, take the rest as the next block."""
         a, b = self.done, self.held
-        W, H, size = self._orthogonalise(np.asfortranarray(self.solve(self._MQ)))
+        W, MW, H, size = self._orthogonalise(np.asfortranarray(self.solve(self._MQ)))
         self.done = b
-        Q, R, more = self._normalise(W, size)
+        Q, R, more = self._normalise(W, MW, size)
         H += more @ R
         self._T[:b, a:b] = H
         self._T[a:b, :b] = H.T
@@ -119,22 +123,34 @@ class KrylovSpace:
     def _random(self, count: int) -> Real:
         return self.solve(self.M @ self.rng.standard_normal((self.M.shape[0], count)))
 
-    def _orthogonalise(self, W: Real) -> tuple[Real, Real, Real]:
-        """W without the basis (twice is enough), the coefficients taken out, and the M-norms before."""
+    def _orthogonalise(self, W: Real) -> tuple[Real, Real, Real, Real]:
+        """W without the basis (twice is enough), MW but for rounding, the coefficients, and the M-norms before."""
         V = self.everything
         MW = self.M @ W
         size = _norms(W, MW)
         H = V.T @ MW
         W = W - V @ H
-        again = V.T @ (self.M @ W)
-        return W - V @ again, H + again, size
+        MW = self.M @ W
+        again = V.T @ MW
+        return W - V @ again, MW, H + again, size
 
-    def _normalise(self, W: Real, size: Real) -> tuple[Real, Real, Real]:
-        """``W = (Q + V h) R`` with Q M-orthonormal and orthogonal to V; a column that is rounding of ``size`` is dropped.
+    def _normalise(self, W: Real, MW: Real, size: Real) -> tuple[Real, Real, Real]:
+        """``W = (Q + V h) R``, Q M-orthonormal and orthogonal to V; what is rounding of ``size`` is dropped.
 
-        Column by column inside the block: a Gram matrix would enlarge rounding where a column all but vanishes, as it
-        does when an input's static response is itself a mode.
+        Sets MQ. Two Gram matrices where all columns are sound.
         """
+        if np.all(_norms(W, MW) > CAREFUL * size):
+            Q, _, R = orthonormalise(W, MW)
+            Q, self._MQ, R2 = orthonormalise(Q, self.M @ Q)
+            if np.linalg.svd(R2 @ R, compute_uv=False)[-1] > CAREFUL * float(size.max(initial=0.0)):
+                return Q, R2 @ R, np.zeros((self.held, W.shape[1]))
+        Q, R, h = self._normalise_with_care(W, size)
+        self._MQ = self.M @ Q
+        return Q, R, h
+
+    def _normalise_with_care(self, W: Real, size: Real) -> tuple[Real, Real, Real]:
+        """Column by column inside the block: a Gram matrix would enlarge rounding where a column all but vanishes, as
+        it does when an input's static response is itself a mode."""
         Q, R = np.zeros((W.shape[0], 0)), np.zeros((0, W.shape[1]))
         for j in range(W.shape[1]):
             w, c = _without(W[:, j : j + 1], Q, self.M)
@@ -150,8 +166,8 @@ class KrylovSpace:
 
     def _append(self, W: Real) -> None:
         """Add what is new in W as (part of) the next block."""
-        W, _, size = self._orthogonalise(np.asfortranarray(W))
-        Q, _, _ = self._normalise(W, size)
+        W, MW, _, size = self._orthogonalise(np.asfortranarray(W))
+        Q, _, _ = self._normalise(W, MW, size)
         self._store(Q)
 
     def _store(self, Q: Real) -> None:
@@ -159,7 +175,6 @@ class KrylovSpace:
         self._room(self.held + k)
         self._V[:, self.held : self.held + k] = Q
         self.held += k
-        self._MQ = self.M @ Q
 
     def _room(self, columns: int) -> None:
         have = self._V.shape[1]
