@@ -62,7 +62,8 @@ class Cutter:
         if self.statics != "vectors":
             return ()
         tailed = self.tailed(numbers)
-        inside = tailed.inside(band) if band is not None else ()
+        swings = band is not None and self.modes.origin.kind == "structure"  # real poles bring no resonance
+        inside = tailed.inside(band) if swings else ()
         told = [f"{len(tailed.pseudo_omega)} pseudo-modes in {self.levels} tail levels"]
         if len(inside):
             told.append(f"{len(inside)} pseudo-modes lie inside the band: keep more modes")
