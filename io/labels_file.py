@@ -14,6 +14,8 @@ from modesieve.io.hdf5_arrays import array, read_real, read_texts, write_array
 from modesieve.reduce.errors import FileError, ModelError
 from modesieve.reduce.model import Input, Interface, Output, Unknowns
 
+#: More would not be channels but a matrix stored the wrong way round, or a trap.
+MOST_CHANNELS = 100_000
 _PARTS = {"inputs": ("name", "unit", "amplitude"), "outputs": ("name", "unit", "resolution")}
 
 

@@ -29,7 +29,7 @@ from modesieve.io.channels import Scale, scale_of
 from modesieve.io.conversion import to_channels, to_seconds
 from modesieve.io.damping_file import DAMPING_ATTRIBUTES, DAMPING_TABLES, read_base, write_base
 from modesieve.io.hdf5 import Node, Source
-from modesieve.io.labels_file import read_channels, read_unknowns, write_channels, write_unknowns
+from modesieve.io.labels_file import MOST_CHANNELS, read_channels, read_unknowns, write_channels, write_unknowns
 from modesieve.io.matrices import Place, Stored, locate
 from modesieve.io.matrix_values import read_dense, read_sparse, write_matrix
 from modesieve.reduce.arrays import DENSE_LIMIT
@@ -241,6 +241,9 @@ def _sizes(stored: dict[str, tuple[_Matrix, Stored]], kind: str) -> tuple[int, i
     loads = [s.final_shape[1] for x, s in stored.values() if x.role == "load"]
     outputs = [s.final_shape[0] for x, s in stored.values() if x.role == "output"]
     m, p = (loads or [0])[0], (outputs or [0])[0]
+    if max(m, p) > MOST_CHANNELS:
+        expected, got = f"at most {MOST_CHANNELS} inputs and outputs", f"{m} and {p}"
+        raise ModelError("too many channels", expected=expected, got=got, where=found.source.path)
     wanted = {"square": (n, n), "load": (n, m), "output": (p, n), "through": (p, m)}
     meant = {
         "square": f"n by n as {first.name}",

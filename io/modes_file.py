@@ -16,7 +16,7 @@ from modesieve.io import hdf5
 from modesieve.io.atomic import PathLike
 from modesieve.io.hdf5 import Node, Source
 from modesieve.io.hdf5_arrays import array, write_array
-from modesieve.io.labels_file import read_channels, write_channels
+from modesieve.io.labels_file import MOST_CHANNELS, read_channels, write_channels
 from modesieve.io.record_file import check_shapes, read_numbers, read_record, write_record
 from modesieve.reduce.errors import FileError
 from modesieve.reduce.fingerprint import fingerprint
@@ -124,7 +124,7 @@ def check_system(system: SmallSystem, where: str, p: int, m: int) -> None:
 def _origin(source: Source, node: Node) -> Origin:
     counts = [hdf5.number_attribute(source, node, f"{noun}_count") or (0.0,) for noun in ("input", "output")]
     m, p = (int(count[0]) for count in counts)
-    if not 0 <= m <= 1_000_000 or not 0 <= p <= 1_000_000:
+    if not 0 <= m <= MOST_CHANNELS or not 0 <= p <= MOST_CHANNELS:
         raise FileError("impossible number of channels", got=f"{m} and {p}", where=source.at(node.name))
     inputs, outputs = read_channels(source, node, m, p)
     return read_record(source, node, Origin, inputs=inputs, outputs=outputs)
