@@ -1,0 +1,88 @@
+"""`modesieve compare MODEL.h5 SMALL.h5...`."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import click
+
+from modesieve.io import load_model, load_modes, load_reduced
+from modesieve.io.atomic import output_folder, write_text
+from modesieve.io.choices import band_of
+from modesieve.io.commands.options import FILE, band_option, json_option, model_argument, modes_option
+from modesieve.io.json_output import comparison_object, dumps
+from modesieve.io.progress_display import ProgressDisplay
+from modesieve.io.run import Written, write_figures
+from modesieve.io.tables import (
+    cautions_report,
+    checks_table,
+    comparison_head,
+    outputs_table,
+    sweep_table,
+    written_table,
+)
+from modesieve.io.terminal import screen, show
+from modesieve.io.verdict import verdict_of
+from modesieve.reduce.comparison.compare import compare as hold
+from modesieve.reduce.comparison.records import Comparison
+from modesieve.reduce.modal.rank import MEASURES, rank
+
+
+@click.command()
+@model_argument
+@click.argument("small_files", metavar="SMALL.h5...", type=FILE, nargs=-1, required=True)
+@modes_option
+@band_option
+@click.option("--out", type=FILE, metavar="DIR", help="Write figures and numbers into this folder.")
+@json_option
+def compare(
+    model_file: Path,
+    small_files: tuple[Path, ...],
+    modes_file: Path | None,
+    band: tuple[str, str] | None,
+    out: Path | None,
+    as_json: bool,
+) -> None:
+    """Hold small models against the full one: errors in frequency, per output, and over the kept count."""
+    if out is not None:
+        output_folder(out)
+    model = load_model(model_file)
+    smalls = [load_reduced(path) for path in small_files]
+    around = band_of(*band, model, where="--band") if band else None
+    modes = None if modes_file is None else load_modes(modes_file, model)
+    with ProgressDisplay() as progress:
+        comparison = hold(model, smalls, modes=modes, band=around, times=True, sweep=True, progress=progress)
+    content = dumps(comparison_object(comparison, small_files))
+    written = [] if out is None else _write(out, comparison, content)
+    if as_json:
+        click.echo(content, nl=False)
+    else:
+        _print(comparison, small_files, written)
+
+
+def _write(folder: Path, comparison: Comparison, content: str) -> list[Written]:
+    path = folder / "comparison.json"
+    write_text(path, content)
+    asked = [c.small.ranked_by for c in comparison.checks if c.small.ranked_by in MEASURES]
+    ranking = rank(comparison.modes, by=asked[0] if asked else "band-share", band=comparison.band)
+    figures = write_figures(folder, comparison, ranking, ("svg",))
+    return [Written(path=path, purpose="the numbers for a script"), *figures]
+
+
+def _print(comparison: Comparison, files: tuple[Path, ...], written: list[Written]) -> None:
+    console = screen()
+    parts: list[Any] = []
+    verdicts = [verdict_of(comparison, check) for check in comparison.checks]
+    for path, verdict in zip(files, verdicts, strict=True):
+        parts += [f"{path}: {verdict.sentence}", "", outputs_table(console, verdict), ""]
+    names = [str(path) for path in files]
+    parts += [comparison_head(console, comparison), "", checks_table(console, comparison, names)]
+    if comparison.sweep is not None:
+        parts += ["", sweep_table(console, comparison.sweep, len(comparison.checks[0].small.kept))]
+    for path, verdict in zip(files, verdicts, strict=True):
+        label = [f"{path}:"] if len(files) > 1 else []
+        parts += ["", *label, *cautions_report(console, verdict)]
+    if written:
+        parts += ["", written_table(console, written)]
+    show(console, *parts)

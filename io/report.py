@@ -1,0 +1,54 @@
+"""The report of a run, in the order of every report: verdict, sieve, errors, kept count, cautions."""
+
+from __future__ import annotations
+
+import io
+from typing import Any
+
+from rich.console import Console
+
+from modesieve.io.run import Result
+from modesieve.io.tables import (
+    cautions_report,
+    checks_table,
+    comparison_head,
+    modes_head,
+    modes_table,
+    outputs_table,
+    pairs_table,
+    sweep_table,
+)
+from modesieve.io.terminal import screen, show
+
+
+def run_report(console: Console, result: Result) -> list[Any]:
+    """The parts of the report, for `show`."""
+    comparison, small, verdict = result.comparison, result.reduced, result.verdict
+    check = comparison.checks[0]
+    pairs = pairs_table(console, check)
+    parts: list[Any] = [
+        verdict.sentence,
+        "",
+        outputs_table(console, verdict),
+        "",
+        modes_head(console, result.ranking),
+        "",
+        modes_table(console, result.ranking, limit=max(12, min(30, len(small.kept) + 4)), kept=small.kept),
+        "",
+        comparison_head(console, comparison),
+        "",
+        checks_table(console, comparison),
+    ]
+    if pairs is not None:
+        parts += ["", pairs]
+    if comparison.sweep is not None:
+        parts += ["", sweep_table(console, comparison.sweep, len(small.kept))]
+    return [*parts, "", *cautions_report(console, verdict)]
+
+
+def run_text(result: Result) -> str:
+    """The report as plain text, as it is piped."""
+    stream = io.StringIO()
+    console = screen(stream)
+    show(console, *run_report(console, result))
+    return stream.getvalue()
