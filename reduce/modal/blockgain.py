@@ -13,11 +13,12 @@ from modesieve.reduce.arrays import Real
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Block:
-    """One block in weighted channels: A (g, g), B (g, m), C (p, g)."""
+    """One block in weighted channels: A (g, g), B (g, m), C (p, g), and its own feedthrough D (p, m) or 0."""
 
     A: Real
     B: Real
     C: Real
+    D: Real | float = 0.0
 
     @property
     def size(self) -> float:
@@ -34,12 +35,12 @@ class Block:
         return bool(np.linalg.cond(self.A) > 1e14)
 
     def gain(self, omega: float) -> float:
-        """Frobenius norm of ``C (j w - A)^-1 B``; inf at an eigenvalue on the axis."""
+        """Frobenius norm of ``C (j w - A)^-1 B + D``; inf at an eigenvalue on the axis."""
         try:
             X = np.linalg.solve(1j * omega * np.eye(len(self.A)) - self.A, self.B)
         except np.linalg.LinAlgError:
             return float("inf")
-        return float(np.linalg.norm(self.C @ X))
+        return float(np.linalg.norm(self.C @ X + self.D))
 
     def static(self) -> float:
         return float("inf") if self.singular else self.gain(0.0)
@@ -62,8 +63,8 @@ class Block:
         return max(float(values[best]), -float(finer.fun))
 
     def energy(self) -> float:
-        """Squared H2 norm, ``tr(C P C^T)`` with ``A P + P A^T + B B^T = 0``; nan if not stable."""
-        if not self.stable:
+        """Squared H2 norm, ``tr(C P C^T)`` with ``A P + P A^T + B B^T = 0``; nan where infinite."""
+        if not self.stable or np.any(self.D):
             return float("nan")
         P = solve_continuous_lyapunov(self.A, -self.B @ self.B.T)
         return float(np.trace(self.C @ P @ self.C.T))

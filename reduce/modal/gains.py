@@ -3,7 +3,7 @@
 A term's squared gain is ``N(t)/D(t)``, t = omega^2, with ``N = A0 + A1 t + A2 t^2`` from its weighted couplings and
 
     oscillating   D = (x - t)^2 + (d omega + eta x)^2     (second order; a complex pair has x = |lambda|^2, d = -2 Re lambda)
-    real pole     D = lambda^2 + t
+    real pole     D = lambda^2 + t                        (A1: the square of a direct part)
 
 so that suprema are roots of one quadratic. The norm is Frobenius' (the only one for a rank-one term).
 """
@@ -105,12 +105,12 @@ def _first_order(system: FirstOrderModal, a: Real, r: Real) -> Gains:
     pairs, blocks = _kinds(system, order)
     A0, A1, x, d, size = (np.full(q, np.nan) for _ in range(5))
     B, C = system.B * a, system.C / r
-    one = np.flatnonzero(order == 1)
-    at = system.offsets[:-1][one]
+    one, starts = np.flatnonzero(order == 1), system.offsets[:-1]
+    at = starts[one]
     x[one], d[one], A1[one] = [-system.blocks[i][0, 0] for i in one], 0.0, 0.0
     size[one] = np.linalg.norm(C[:, at], axis=0) * np.linalg.norm(B[at], axis=1)
     A0[one] = size[one] ** 2
-    at = system.offsets[:-1][pairs]
+    at = starts[pairs]
     lam = np.array([complex(system.blocks[i][0, 0], abs(system.blocks[i][0, 1])) for i in pairs])
     sign = np.array([np.sign(system.blocks[i][0, 1]) for i in pairs])
     c = (C[:, at] + 1j * sign * C[:, at + 1]) / np.sqrt(2)
@@ -119,10 +119,36 @@ def _first_order(system: FirstOrderModal, a: Real, r: Real) -> Gains:
     size[pairs] = np.linalg.norm(c, axis=0) * np.linalg.norm(b, axis=1)
     A1[pairs] = _real_part_norm(c, b, np.ones(len(pairs)))
     A0[pairs] = _real_part_norm(c, b, -np.conj(lam))
-    none = np.zeros(q)
+    A2 = np.zeros(q)
+    if system.direct is not None:
+        through = system.direct * a / r
+        A0[one], A1[one], A2[one] = _shifted_pole(_outer(C[:, starts[one]], B[starts[one]]), through[one], x[one])
+        P1, P0 = 2 * _outer(c, b).real, -2 * _outer(np.conj(lam) * c, b).real
+        A0[pairs], A1[pairs], A2[pairs] = _shifted_pair(P0, P1, through[pairs], x[pairs], d[pairs])
     oscillating = np.zeros(q, dtype=bool)
     oscillating[pairs] = True
-    return Gains(A0=A0, A1=A1, A2=none, oscillating=oscillating, x=x, d=d, eta=none, size=size, blocks=blocks)
+    return Gains(A0=A0, A1=A1, A2=A2, oscillating=oscillating, x=x, d=d, eta=np.zeros(q), size=size, blocks=blocks)
+
+
+def _outer(c: Any, b: Any) -> Any:
+    """``c_i b_i^T`` (q, p, m) of c (p, q) and b (q, m)."""
+    return c.T[:, :, None] * b[:, None, :]
+
+
+def _shifted_pole(P: Real, D: Real, rate: Real) -> tuple[Real, Real, Real]:
+    """A0, A1, A2 (q,) of ``P/(s + rate) + D``, each P and D (q, p, m)."""
+    constant = P + rate[:, None, None] * D
+    return _square(constant), _square(D), np.zeros(len(D))
+
+
+def _shifted_pair(P0: Real, P1: Real, D: Real, x: Real, d: Real) -> tuple[Real, Real, Real]:
+    """A0, A1, A2 (q,) of ``(P0 + P1 s)/(s^2 + d s + x) + D``."""
+    N0, N1 = P0 + x[:, None, None] * D, P1 + d[:, None, None] * D
+    return _square(N0), _square(N1) - 2 * np.einsum("qpm,qpm->q", N0, D), _square(D)
+
+
+def _square(P: Real) -> Real:
+    return np.asarray(np.einsum("qpm,qpm->q", P, P))
 
 
 def _kinds(system: FirstOrderModal, order: Any) -> tuple[Ints, Ints]:

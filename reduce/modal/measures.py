@@ -61,7 +61,8 @@ def table_of(modes: Modes, band: tuple[float, float]) -> Table:
         for term in g.blocks:
             at = modes.system.states_of(int(term))
             B, C = modes.system.B[at] * a, modes.system.C[:, at] / r
-            blocks[int(term)] = Block(A=modes.system.blocks[int(term)], B=B, C=C)
+            D = 0.0 if modes.system.direct is None else modes.system.direct[int(term)] * a / r
+            blocks[int(term)] = Block(A=modes.system.blocks[int(term)], B=B, C=C, D=D)
     return Table(modes=modes, gains=g, blocks=blocks, band=band)
 
 
@@ -127,11 +128,11 @@ def _energy(table: Table) -> Scores:
     with np.errstate(divide="ignore", invalid="ignore"):
         swing = (np.where(g.A0 > 0, g.A0 / g.x, 0.0) + g.A1) / (2 * d)
         swing = np.where((d > 0) & ((g.x > 0) | ((g.x == 0) & (g.A0 == 0))) & (g.A2 == 0), swing, np.nan)
-        real = np.where(g.x > 0, g.A0 / (2 * g.x), np.nan)
+        real = np.where((g.x > 0) & (g.A1 == 0), g.A0 / (2 * g.x), np.nan)
     values = np.where(g.oscillating, swing, real)
     values = np.where((g.size == 0) & (g.A2 == 0), 0.0, values)
     reason = "undamped, rigid-body, integrating and unstable modes have no finite H2 norm"
-    if np.any(g.A2 > 0):
+    if np.any(g.A2 > 0) or np.any(~g.oscillating & (g.A1 > 0)):
         reason = "acceleration outputs pass the load through at once: no finite H2 norm"
     return _finite(table.spread(values, lambda block: block.energy()), reason)
 
@@ -143,7 +144,7 @@ def _balanced(table: Table) -> Scores:
         root = np.sqrt(np.maximum(g.x, 0.0))
         at_pole = np.sqrt(np.maximum(g.A0 + g.A1 * g.x + g.A2 * g.x**2, 0.0))
         swing = np.where((d > 0) & (g.x > 0), at_pole / (2 * d * root), np.nan)
-        real = np.where(g.x > 0, np.sqrt(g.A0) / (2 * g.x), np.nan)
+        real = np.where(g.x > 0, g.size / (2 * g.x), np.nan)
     values = np.where(g.size == 0, 0.0, np.where(g.oscillating, swing, real))
     return _finite(
         table.spread(values, lambda block: block.hankel()),
