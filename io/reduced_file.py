@@ -24,6 +24,7 @@ from modesieve.io.hdf5_arrays import write_array
 from modesieve.io.model_file import write_model
 from modesieve.io.modes_file import check_format, check_system, group, read_modes, write_table
 from modesieve.io.record_file import check_shapes, read_numbers, read_record, write_record
+from modesieve.io.seal import write_seal
 from modesieve.reduce.errors import FileError
 from modesieve.reduce.modal.records import Modes, Ranking
 from modesieve.reduce.model import Damping, Model, StateSpace, Structure
@@ -73,6 +74,7 @@ def write_reduced(file: Node, small: ReducedModel) -> None:
     if small.samples is not None:
         write_record(file.create_group("samples"), small.samples)
     write_record(file.create_group("result"), small, without=_ELSEWHERE)
+    write_seal(file)
 
 
 def as_model(small: ReducedModel) -> Model:

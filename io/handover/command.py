@@ -124,9 +124,7 @@ def _header_notes(model: ReducedModel) -> list[str]:
 @click.argument("small", type=FILE)
 @click.argument("inputs", type=FILE)
 @click.option("--hold", type=click.Choice(["zero", "linear"]), default="zero", show_default=True)
-@click.option(
-    "--start", default="rest", show_default=True, help="rest, uniform:25degC, steady, or a file."
-)
+@click.option("--start", default="rest", show_default=True, help="rest, uniform:25degC, steady, or a file.")
 @click.option("--save-state", type=FILE, help="Save the state at the last time, to go on from with --start.")
 @click.option("-o", "--output", type=FILE, required=True)
 def simulate(small: Path, inputs: Path, hold: Any, start: str, save_state: Path | None, output: Path) -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from hashlib import sha256
 from importlib.resources import files
 from typing import Any
 
@@ -40,8 +41,10 @@ class Words:
     commands: tuple[str, ...] = ()
 
 
-def page_text(comparison: Comparison, ranking: Ranking, words: Words, *, index: int = 0) -> str:
+def page_text(comparison: Comparison, ranking: Ranking, words: Words, *, index: int = 0, file_seal: str = "") -> str:
     """The whole page as HTML, for the small model ``comparison.checks[index]``; `ranking` orders its modes.
+
+    file_seal: seal of the small model's file, by which a review tells that the two belong together.
 
     Names of channels and titles come from files: they reach the page through JSON and text nodes only.
     """
@@ -49,11 +52,12 @@ def page_text(comparison: Comparison, ranking: Ranking, words: Words, *, index: 
     script = {name: Markup(parts.joinpath(f"{name}.js").read_text("utf-8")) for name in SCRIPTS}
     environment = Environment(autoescape=select_autoescape(default=True, default_for_string=True))
     template = environment.from_string(parts.joinpath("page.html").read_text("utf-8"))
-    data = page_data(comparison, comparison.checks[index], ranking, words)
+    data = encode(page_data(comparison, comparison.checks[index], ranking, words) | {"file_seal": file_seal})
     return template.render(
         title=words.title,
         css=Markup(parts.joinpath("page.css").read_text("utf-8")),
-        data=Markup(encode(data)),
+        data=Markup(data),
+        seal=sha256(data.encode()).hexdigest(),
         plotly=Markup(_plotly()),
         **script,
     )
