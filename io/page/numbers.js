@@ -21,7 +21,7 @@ const Numbers = (() => {
       for (const name of ["x", "d", "eta", "b", "cq", "cv", "ca"]) s[name] = array(stored[name]);
     } else {
       s.sizes = stored.sizes;
-      for (const name of ["blocks", "B", "C"]) s[name] = array(stored[name]);
+      for (const name of ["blocks", "B", "C", "direct"]) s[name] = array(stored[name]);
       s.first = []; s.firstBlock = [];
       let row = 0, cell = 0;
       for (const r of s.sizes) { s.first.push(row); s.firstBlock.push(cell); row += r; cell += r * r; }
@@ -33,8 +33,17 @@ const Numbers = (() => {
   // acc += sign * term i of s, for all pairs.
   function addTerm(acc, s, i, omega, sign) {
     if (s.form === "second order") secondOrder(acc, s, i, omega, sign);
-    else if (s.sizes[i] <= 2) smallBlock(acc, s, i, omega, sign);
-    else largeBlock(acc, s, i, omega, sign);
+    else {
+      if (s.sizes[i] <= 2) smallBlock(acc, s, i, omega, sign);
+      else largeBlock(acc, s, i, omega, sign);
+      if (s.direct) addDirect(acc, s, i, omega, sign);
+    }
+  }
+
+  // The feedthrough that belongs to term i: of velocity and acceleration outputs.
+  function addDirect(acc, s, i, omega, sign) {
+    const size = s.p * s.m;
+    for (let w = 0; w < omega.length; w++) for (let e = 0; e < size; e++) acc.re[w * size + e] += sign * s.direct[i * size + e];
   }
 
   function secondOrder(acc, s, i, omega, sign) {
@@ -185,8 +194,11 @@ const Numbers = (() => {
   // Unit-step response of term i for one pair at the times t, added to acc.
   function addStep(acc, s, i, row, col, t) {
     if (s.form === "second order") stepSecondOrder(acc, s, i, row, col, t);
-    else if (s.sizes[i] === 1) stepPole(acc, s, i, row, col, t);
-    else stepBlock(acc, s, i, row, col, t);
+    else {
+      if (s.sizes[i] === 1) stepPole(acc, s, i, row, col, t);
+      else stepBlock(acc, s, i, row, col, t);
+      if (s.direct) for (let n = 0; n < t.length; n++) acc[n] += s.direct[(i * s.p + row) * s.m + col];
+    }
   }
 
   function stepSecondOrder(acc, s, i, row, col, t) {

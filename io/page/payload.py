@@ -52,6 +52,7 @@ def system_data(system: SmallSystem) -> dict[str, Any]:
         "blocks": packed(blocks),
         "B": packed(system.B),
         "C": packed(system.C),
+        "direct": None if system.direct is None else packed(system.direct),
         **common,
     }
 
@@ -67,6 +68,8 @@ def term_statics(system: SmallSystem) -> Real:
             at = system.states_of(i)
             if np.linalg.matrix_rank(system.blocks[i]) == len(system.blocks[i]):
                 out[i] = -system.C[:, at] @ np.linalg.solve(system.blocks[i], system.B[at])
+            if system.direct is not None:
+                out[i] += system.direct[i]
     return out
 
 
