@@ -90,7 +90,8 @@ def _ported(model: Model) -> None:
 # ---- the folder ------------------------------------------------------------------------------------------------------
 
 #: What `write_run` leaves in its folder (the README lists the same).
-SMALL, MODES, KEEP, SUMMARY, REPORT, BRIEF, FIGURES = (
+PAGE, SMALL, MODES, KEEP, SUMMARY, REPORT, BRIEF, FIGURES = (
+    "page.html",
     "small.h5",
     "modes.h5",
     "keep.toml",
@@ -122,7 +123,20 @@ def write_run(folder: Path, result: Result, *, brief: str = "", report: str = ""
         keep(REPORT, "the report as printed", lambda p: write_text(p, report))
     if brief:
         keep(BRIEF, "the brief of this run", lambda p: write_text(p, brief))
+    keep(PAGE, "the page: decide, show and check by looking", lambda p: write_page(p, result, folder / SMALL))
     return [*out, *write_figures(folder, result.comparison, result.ranking, result.settings.figures)]
+
+
+def write_page(path: Path, result: Result, small_file: Path) -> None:
+    """Write the page of a run, tied to its small model's file."""
+    from modesieve.io.page import page_text, page_words, reproduce
+    from modesieve.io.review import file_seal
+
+    check = result.comparison.checks[0]
+    source = result.modes.origin.source
+    commands = reproduce(source or "model.h5", small_file.name, result.comparison, check, KEEP)
+    words = page_words(result.comparison, check, commands=commands)
+    write_text(path, page_text(result.comparison, result.ranking, words, file_seal=file_seal(small_file)[1]))
 
 
 def write_figures(folder: Path, comparison: Comparison, ranking: Ranking, formats: tuple[str, ...]) -> list[Written]:

@@ -27,6 +27,7 @@ COMMANDS: dict[str, tuple[str, str, str]] = {
         "export",
         "Write a small model as arrays or as a stand-alone surrogate.",
     ),
+    "review": ("modesieve.io.commands.review", "review", "Recompute what a small model's file can prove."),
     "simulate": ("modesieve.io.handover.command", "simulate", "Run a small model through an input history."),
 }
 

@@ -27,6 +27,7 @@ from modesieve.io.verdict import verdict_of
 from modesieve.reduce.comparison.compare import compare as hold
 from modesieve.reduce.comparison.records import Comparison
 from modesieve.reduce.modal.rank import MEASURES, rank
+from modesieve.reduce.modal.records import Ranking
 
 
 @click.command()
@@ -35,6 +36,7 @@ from modesieve.reduce.modal.rank import MEASURES, rank
 @modes_option
 @band_option
 @click.option("--out", type=FILE, metavar="DIR", help="Write figures and numbers into this folder.")
+@click.option("--page", type=FILE, metavar="FILE", help="Write the page of the first small model.")
 @json_option
 def compare(
     model_file: Path,
@@ -42,6 +44,7 @@ def compare(
     modes_file: Path | None,
     band: tuple[str, str] | None,
     out: Path | None,
+    page: Path | None,
     as_json: bool,
 ) -> None:
     """Hold small models against the full one: errors in frequency, per output, and over the kept count."""
@@ -55,6 +58,8 @@ def compare(
         comparison = hold(model, smalls, modes=modes, band=around, times=True, sweep=True, progress=progress)
     content = dumps(comparison_object(comparison, small_files))
     written = [] if out is None else _write(out, comparison, content)
+    if page is not None:
+        written.append(_write_page(page, comparison, model_file, small_files[0]))
     if as_json:
         click.echo(content, nl=False)
     else:
@@ -64,10 +69,24 @@ def compare(
 def _write(folder: Path, comparison: Comparison, content: str) -> list[Written]:
     path = folder / "comparison.json"
     write_text(path, content)
-    asked = [c.small.ranked_by for c in comparison.checks if c.small.ranked_by in MEASURES]
-    ranking = rank(comparison.modes, by=asked[0] if asked else "band-share", band=comparison.band)
-    figures = write_figures(folder, comparison, ranking, ("svg",))
+    figures = write_figures(folder, comparison, _ranking(comparison), ("svg",))
     return [Written(path=path, purpose="the numbers for a script"), *figures]
+
+
+def _write_page(path: Path, comparison: Comparison, model_file: Path, small_file: Path) -> Written:
+    from modesieve.io.page import page_text, page_words, reproduce
+    from modesieve.io.review import file_seal
+
+    check = comparison.checks[0]
+    commands = reproduce(model_file.name, small_file.name, comparison, check, "keep.toml")
+    words = page_words(comparison, check, commands=commands)
+    write_text(path, page_text(comparison, _ranking(comparison), words, file_seal=file_seal(small_file)[1]))
+    return Written(path=path, purpose="the page of the first small model")
+
+
+def _ranking(comparison: Comparison) -> Ranking:
+    asked = [c.small.ranked_by for c in comparison.checks if c.small.ranked_by in MEASURES]
+    return rank(comparison.modes, by=asked[0] if asked else "band-share", band=comparison.band)
 
 
 def _print(comparison: Comparison, files: tuple[Path, ...], written: list[Written]) -> None:

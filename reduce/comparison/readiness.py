@@ -121,9 +121,10 @@ def _spilling(small: ReducedModel, spill: Real) -> list[str]:
     k, l = np.unravel_index(int(np.argmax(spill)), spill.shape)
     origin = small.modes.origin
     pair = f"{origin.outputs[k].name} from {origin.inputs[l].name}"
-    size = f"{100 * spill[k, l]:.3g} % of the kept ones" if spill[k, l] < 1e3 else "where no kept mode couples"
+    far = spill[k, l] >= 1e3
+    size = "alone" if far else f"at {100 * spill[k, l]:.3g} % of the kept ones"
     return [
-        f"spillover: dropped modes peak at {size} for {pair}; roll the controller off below them, or keep them in the "
+        f"spillover: dropped modes peak {size} for {pair}; roll the controller off below them, or keep them in the "
         "model that it is checked against"
     ]
 
