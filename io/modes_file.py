@@ -27,7 +27,7 @@ from modesieve.reduce.response.small import SecondOrderModal, SmallSystem
 FORMAT, VERSION = "modesieve modes", 1
 _ELSEWHERE = ("origin", "certificate", "model", "vectors", "left", "workspace")
 _SECOND = {"x": "k", "d": "k", "eta": "k", "b": "km", "cq": "pk", "cv": "pk", "ca": "pk", "D": "pm", "X": "pm"}
-_FIRST = {"B": "rm", "C": "pr", "D": "pm"}
+_FIRST = {"B": "rm", "C": "pr", "D": "pm", "direct": "qpm"}
 _MODES = {"eigenvalue": "k", "term": "k", "residual": "k", "condition": "k", "cluster": "k", "always_kept": "k"}
 _MODES |= {"static": "pm", "effective_mass": "k3", "total_mass": "3"}
 
