@@ -14,7 +14,7 @@ from modesieve.reduce.comparison.sweep import sweep_of
 from modesieve.reduce.comparison.times import time_responses
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.fingerprint import fingerprint
-from modesieve.reduce.modal.records import Modes
+from modesieve.reduce.modal.records import Modes, Ranking
 from modesieve.reduce.model import Model
 from modesieve.reduce.progress import Listener, tell
 from modesieve.reduce.response.deviation import Yardstick, joined, picked
@@ -106,11 +106,21 @@ def _checks(yard: Yardstick, smalls: tuple[ReducedModel, ...], certainty: Certai
 def _sweep(setting: _Setting, yard: Yardstick, smalls: tuple[ReducedModel, ...], certainty: Certainty) -> Sweep | None:
     if yard.refusal or 0 in (yard.channels.m, yard.channels.p) or len(setting.modes) == 0:
         return None
+    ranking = _ranking(setting, smalls)
+    return None if ranking is None else sweep_of(setting.modes, ranking, yard, certainty)
+
+
+def _ranking(setting: _Setting, smalls: tuple[ReducedModel, ...]) -> Ranking | None:
+    """The order of the first small model, or another one where this list of modes has no such measure."""
     from modesieve.reduce.modal.rank import MEASURES, rank
 
     asked = [small.ranked_by for small in smalls if small.ranked_by in MEASURES]
-    ranking = rank(setting.modes, by=asked[0], band=setting.band) if asked else rank(setting.modes, band=setting.band)
-    return sweep_of(setting.modes, ranking, yard, certainty)
+    for by in (*asked[:1], "band-share", "coupling"):
+        try:
+            return rank(setting.modes, by=by, band=setting.band)
+        except ChoiceError:
+            continue
+    return None
 
 
 # ---- what is compared ----------------------------------------------------------------------------------------------
