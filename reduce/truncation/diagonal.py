@@ -63,8 +63,10 @@ class Diagonal:
 
 
 def is_diagonal(system: SmallSystem) -> bool:
-    """True when every term is one real mode."""
-    return isinstance(system, SecondOrderModal) or all(len(a) == 1 for a in system.blocks)
+    """True when every term is one real mode, without a feedthrough of its own."""
+    if isinstance(system, SecondOrderModal):
+        return True
+    return all(len(a) == 1 for a in system.blocks) and (system.direct is None or not np.any(system.direct))
 
 
 def diagonal(system: SmallSystem) -> Diagonal:
