@@ -4,7 +4,11 @@ from __future__ import annotations
 
 import json
 import math
+import os
+import re
+import tomllib
 from collections.abc import Iterable
+from pathlib import Path
 
 from modesieve.io.settings import Settings
 from modesieve.reduce.fingerprint import describe_damping
@@ -186,3 +190,22 @@ def _output(settings: Settings) -> str:
         f"sweep = {str(settings.sweep).lower():<19} # error over the number of kept modes\n"
         f"times = {str(settings.times).lower():<19} # step and impulse responses"
     )
+
+
+# ---- moving a brief --------------------------------------------------------------------------------------------------
+
+_PATH = re.compile(r"""^(\s*(?:model|list_file)\s*=\s*)("(?:[^"\\]|\\.)*"|'[^']*')""", re.MULTILINE)
+
+
+def relocated(text: str, base: Path, folder: Path) -> str:
+    """The brief ``text`` with its paths, relative to ``base``, made to work from ``folder``; comments stay.
+
+    >>> print(relocated('model = "a.h5"  # mine', Path("/job"), Path("/job/results")))
+    model = "../a.h5"  # mine
+    """
+
+    def moved(found: re.Match[str]) -> str:
+        path = Path(str(tomllib.loads(f"path = {found[2]}")["path"]))
+        return found[1] + _quoted(str(path) if path.is_absolute() else os.path.relpath(base / path, folder))
+
+    return _PATH.sub(moved, text)

@@ -25,7 +25,7 @@ def run_report(console: Console, result: Result) -> list[Any]:
     """The parts of the report, for `show`."""
     comparison, small, verdict = result.comparison, result.reduced, result.verdict
     check = comparison.checks[0]
-    pairs = pairs_table(console, check)
+    pairs = pairs_table(console, comparison, check)
     parts: list[Any] = [
         verdict.sentence,
         "",

@@ -51,7 +51,7 @@ def suggest(model: Model, progress: Listener = None) -> Suggestion:
         )
     lowest = find_modes(model, count=None if model.n <= ALL_LIMIT else 2 * _INSIDE, progress=progress)
     band = suggested_band(lowest)
-    choice, note = _choice(model, lowest, band, progress)
+    choice, note = _choice(model, band, progress)
     return Suggestion(settings=Settings(band=band, choice=choice), notes=(note,))
 
 
@@ -117,9 +117,9 @@ def _halved(value: float, digits: int) -> float:
 # ---- the tolerance ---------------------------------------------------------------------------------------------------
 
 
-def _choice(model: Model, lowest: Modes, band: tuple[float, float], progress: Listener) -> tuple[Choice, str]:
+def _choice(model: Model, band: tuple[float, float], progress: Listener) -> tuple[Choice, str]:
     """The tightest tolerance of the ladder that is met with reserve; else every mode in the band."""
-    modes = lowest if _reaches(lowest, band) else find_modes(model, band, progress=progress)
+    modes = find_modes(model, band, progress=progress)  # as a run will: fewer than ``lowest`` in a small model
     everything = Keep(numbers=tuple(int(i) for i in modes.numbers))
     best = truncate(_without_model(modes), everything, band=band)
     check = compare(
@@ -140,13 +140,6 @@ def _told(found: dict[str, float], count: int) -> str:
         f"all {count} computed modes are off by {100 * found['local']:.2g} % of local, {100 * found['peak']:.2g} % of "
         "peak at the frequencies tried"
     )
-
-
-def _reaches(modes: Modes, band: tuple[float, float]) -> bool:
-    """Whether the list holds what a run over ``band`` would compute."""
-    if modes.certificate.complete == "all":
-        return True
-    return (modes.certificate.below_omega or 0.0) >= 1.5 * band[1]
 
 
 def _without_model(modes: Modes) -> Modes:

@@ -214,11 +214,10 @@ def _mass(value: float) -> str:
 
 def reduced_report(console: Console, small: ReducedModel) -> RenderableType:
     """What was kept and how wrong it is."""
-    from modesieve.io.verdict import kept_words
-
+    kept = f"{len(small.kept)} of {len(small.modes)} computed modes ({runs(small.kept)}), " if small.kept else ""
     rows = [
         ("model", origin_words(small.modes)),
-        ("kept", f"{kept_words(small)} ({runs(small.kept)})" if small.kept else kept_words(small)),
+        ("kept", f"{kept}{small.states} states"),
         ("ranked by", small.ranked_by),
         ("statics", small.statics + (f", {small.levels} tail levels" if small.levels else "")),
         ("band", band_words(small.band, small.modes)),
@@ -292,16 +291,18 @@ def outputs_table(console: Console, verdict: Verdict) -> RenderableType:
     return table(console, columns, "Per output, all inputs at their amplitudes", left=(0, 3, 5))
 
 
-def pairs_table(console: Console, check: Check) -> RenderableType | None:
+def pairs_table(console: Console, comparison: Comparison, check: Check) -> RenderableType | None:
     """Worst error of every input-output pair in percent of that pair's own peak; None where it would not fit."""
-    origin = check.small.modes.origin
-    if not origin.m * origin.p > 1 or origin.m > 6 or origin.p > 20:
+    origin = comparison.modes.origin
+    counts = np.abs(origin.weigh(comparison.full.G)).max(axis=0, initial=0.0) >= comparison.threshold
+    if origin.m * origin.p <= 1 or origin.m > 6 or origin.p > 20:
         return None
-    columns = [("from", [c.name for c in origin.outputs])]
-    columns[0] = ("to \\ from", columns[0][1])
+    columns: list[Column] = [("to \\ from", [c.name for c in origin.outputs])]
     for l, channel in enumerate(origin.inputs):
-        columns.append((channel.name, [_figure(float(v)) for v in check.pair_peak[:, l]]))
-    return table(console, columns, "Worst error of every pair, % of the pair's own peak")
+        shown = zip(check.pair_peak[:, l], counts[:, l], strict=True)
+        columns.append((channel.name, [_figure(float(v)) if counted else "-" for v, counted in shown]))
+    title = "Worst error of every pair, % of the pair's own peak"
+    return table(console, columns, title + ("" if counts.all() else "; -: never above the threshold"))
 
 
 def sweep_table(console: Console, sweep: Sweep, kept: int, limit: int = 14) -> RenderableType:

@@ -15,15 +15,14 @@ from modesieve.io.json_output import comparison_object, dumps
 from modesieve.io.progress_display import ProgressDisplay
 from modesieve.io.run import Written, write_figures
 from modesieve.io.tables import (
-    cautions_report,
     checks_table,
     comparison_head,
     outputs_table,
     sweep_table,
     written_table,
 )
-from modesieve.io.terminal import screen, show
-from modesieve.io.verdict import verdict_of
+from modesieve.io.terminal import bullets, screen, show
+from modesieve.io.verdict import Verdict, verdict_of
 from modesieve.reduce.comparison.compare import compare as hold
 from modesieve.reduce.comparison.records import Comparison
 from modesieve.reduce.modal.rank import MEASURES, rank
@@ -89,6 +88,18 @@ def _ranking(comparison: Comparison) -> Ranking:
     return rank(comparison.modes, by=asked[0] if asked else "band-share", band=comparison.band)
 
 
+def _cautions(files: tuple[Path, ...], verdicts: list[Verdict]) -> list[str]:
+    """What concerns one small model first, with its name, then what concerns all of them."""
+    shared = [text for text in verdicts[0].cautions if all(text in verdict.cautions for verdict in verdicts)]
+    own = [
+        f"{path}: {text}"
+        for path, verdict in zip(files, verdicts, strict=True)
+        for text in verdict.cautions
+        if text not in shared
+    ]
+    return [*own, *shared]
+
+
 def _print(comparison: Comparison, files: tuple[Path, ...], written: list[Written]) -> None:
     console = screen()
     parts: list[Any] = []
@@ -99,9 +110,7 @@ def _print(comparison: Comparison, files: tuple[Path, ...], written: list[Writte
     parts += [comparison_head(console, comparison), "", checks_table(console, comparison, names)]
     if comparison.sweep is not None:
         parts += ["", sweep_table(console, comparison.sweep, len(comparison.checks[0].small.kept))]
-    for path, verdict in zip(files, verdicts, strict=True):
-        label = [f"{path}:"] if len(files) > 1 else []
-        parts += ["", *label, *cautions_report(console, verdict)]
+    parts += ["", "Cautions", bullets(console, _cautions(files, verdicts))]
     if written:
         parts += ["", written_table(console, written)]
     show(console, *parts)

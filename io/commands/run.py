@@ -9,6 +9,7 @@ import click
 
 from modesieve.io.atomic import output_folder
 from modesieve.io.brief import brief_model, brief_settings, read_brief
+from modesieve.io.brief_text import relocated
 from modesieve.io.commands.options import FILE, json_option
 from modesieve.io.json_output import dumps, run_object
 from modesieve.io.progress_display import ProgressDisplay
@@ -32,7 +33,9 @@ def run(brief_file: Path, out: Path | None, as_json: bool) -> None:
     folder = output_folder(out if out is not None else _folder(brief_file, brief.folder))
     with ProgressDisplay() as progress:
         result = do_run(model, settings, progress)
-    written = write_run(folder, result, brief=brief_file.read_text("utf-8"), report=run_text(result))
+    written = write_run(
+        folder, result, brief=relocated(brief_file.read_text("utf-8"), base, folder.resolve()), report=run_text(result)
+    )
     if as_json:
         click.echo(dumps(run_object(result) | {"files": [str(one.path) for one in written]}), nl=False)
     else:
