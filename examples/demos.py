@@ -60,7 +60,7 @@ def mast() -> Demo:
     )
     units = UnitSystem(length="m", mass="kg", time="s")
     model = _with_units(model, units)
-    return Demo(name="mast", model=model, band=(0.2 * HZ, 40 * HZ), tolerance=Tolerance(value=0.02, of="peak"))
+    return Demo(name="mast", model=model, band=(0.2 * HZ, 15 * HZ), tolerance=Tolerance(value=0.05))
 
 
 def _with_units(model: Structure, units: UnitSystem) -> Structure:
