@@ -95,7 +95,7 @@ def round_between(low: float, high: float) -> float:
     """The number with the fewest digits well inside (low, high).
 
     >>> round_between(37.2, 52.9), round_between(0.0123, 0.0127), round_between(118.0, 231.0)
-    (45.0, 0.0125, 200.0)
+    (40.0, 0.0125, 200.0)
     """
     margin = 0.1 * (high - low)
     middle = math.sqrt(low * high)
