@@ -10,19 +10,20 @@ import scipy.sparse as sp
 from modesieve.examples.frames import frame, structure_of, tube
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.model import Damping, Input, ModalRatio, Output, Structure, Thermal, UnitSystem, Unknowns
-from modesieve.reduce.truncation.records import Tolerance
+from modesieve.reduce.truncation.records import Statics, Tolerance
 
 HZ = 2 * np.pi
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Demo:
-    """A model with what its user would ask: the band (rad/s) and the tolerance."""
+    """A model with what its user would ask: the band (rad/s), the tolerance, and how dropped statics are held."""
 
     name: str
     model: Structure | Thermal
     band: tuple[float, float]
     tolerance: Tolerance
+    statics: Statics | None = None
 
 
 # ---- the mast --------------------------------------------------------------------------------------------------------
@@ -148,6 +149,7 @@ def cold_plate() -> Demo:
         model=model,
         band=(1 / 3600.0, 1 / 5.0),
         tolerance=Tolerance(value=0.5, of="absolute", unit="K"),
+        statics="vectors",
     )
 
 

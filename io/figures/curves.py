@@ -33,9 +33,13 @@ from modesieve.reduce.truncation.records import Tolerance
 
 
 def worst_pair(comparison: Comparison) -> tuple[int, int]:
-    """Output and input of the pair with the largest error relative to its own peak."""
-    share = np.nan_to_num(np.asarray(comparison.checks[0].pair_peak, dtype=float), nan=0.0, posinf=0.0)
-    k, l = np.unravel_index(int(np.argmax(share)), share.shape)
+    """Output and input of the pair that the local error is worst for, else the one with the largest response."""
+    origin, named = comparison.modes.origin, comparison.checks[0].local_error.pair
+    if named and named[0]:
+        inputs, outputs = [c.name for c in origin.inputs], [c.name for c in origin.outputs]
+        return outputs.index(named[1]), inputs.index(named[0])
+    G = np.abs(origin.weigh(comparison.full.G))
+    k, l = np.unravel_index(int(np.argmax(np.where(np.isfinite(G), G, 0.0).max(axis=0))), G.shape[1:])
     return int(k), int(l)
 
 

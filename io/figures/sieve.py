@@ -27,7 +27,7 @@ def sieve_chart(ranking: Ranking, kept: tuple[int, ...], band: tuple[float, floa
     level = _level(ranking, set(kept))
     if level is not None:
         axes.axhline(level, color=BLUE, linewidth=2.0, zorder=4)
-        axes.annotate("sieve line", (1.0, level), xycoords=("axes fraction", "data"), xytext=(-2, 3), ha="right",
+        axes.annotate("sieve line", (0.0, level), xycoords=("axes fraction", "data"), xytext=(4, 3), ha="left",
                       textcoords="offset points", fontsize=7.5, color=BLUE)  # fmt: skip
     for filled, name in ((True, "kept"), (False, "dropped")):
         axes.plot([], [], "o", color=BLUE if filled else QUIET, markerfacecolor=BLUE if filled else "none", label=name)

@@ -70,6 +70,16 @@ def finish(axes: Axes, *, x: str, y: str, log_x: bool = True, log_y: bool = True
         plain_log(axes.xaxis)
     if log_y:
         axes.set_yscale("log")
+        axes.yaxis.set_minor_formatter(FuncFormatter(lambda value, _: _between(axes, value)))
+    else:
+        axes.yaxis.set_major_formatter(FuncFormatter(lambda value, _: format_number(value, 4)))
+
+
+def _between(axes: Axes, value: float) -> str:
+    """2 and 5 between the decades get a number where hardly a decade is in view."""
+    low, high = axes.get_ylim()
+    leading = f"{value:.0e}"[0]
+    return format_number(value, 3) if high < 30 * low and leading in "25" else ""
 
 
 def plain_log(axis: Any) -> None:

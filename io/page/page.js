@@ -185,9 +185,9 @@ const modesieve = (() => {
       b.setAttribute("aria-pressed", String(all ? state.pair === null : state.pair === e));
       if (all) continue;
       const unit = data.outputs[Math.floor(e / m)].unit, size = list[e].value * data.amplitudes[e % m];
-      b.textContent = `${C.engineering(size, unit)}  ${C.percent(list[e].share)}`;
+      b.textContent = `${C.engineering(size, unit)}  ${Number.isFinite(list[e].share) ? C.percent(list[e].share) : "–"}`;
       b.setAttribute("aria-label", `${data.outputs[Math.floor(e / m)].name} from ${data.inputs[e % m].name}: worst error ${C.engineering(size, unit)}, ${C.percent(list[e].share)}, at ${at(list[e].omega)}`);
-      b.title = `worst at ${at(list[e].omega)}`;
+      b.title = Number.isFinite(list[e].share) ? `worst at ${at(list[e].omega)}` : "never above the threshold";
       b.parentElement.classList.toggle("bad", list.length > 1 && list[e].share === top && top > Math.max(3 * middle, 1e-9));
     }
   }

@@ -94,7 +94,8 @@ const Trial = ((N) => {
         if (size > out[e].value) { out[e].value = size; out[e].omega = omega[w]; }
         top[e] = Math.max(top[e], Math.hypot(full.re[i], full.im[i]));
       }
-      out.forEach((o, e) => { o.share = top[e] > 0 ? o.value / top[e] : o.value > 0 ? Infinity : 0; });
+      // A pair that never rises above the threshold (rounding, symmetry) has no share to speak of.
+      out.forEach((o, e) => { o.share = top[e] * scale[e] > threshold * (1 - 1e-12) ? o.value / top[e] : NaN; });
       return out;
     }
 
