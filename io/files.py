@@ -16,10 +16,10 @@ from modesieve.reduce.model import Model
 from modesieve.reduce.truncation.records import ReducedModel
 
 Record: TypeAlias = Model | Modes | ReducedModel
-_LOADERS: dict[str, Callable[[PathLike], Record]] = {
-    model_file.FORMAT: model_file.load_model,
-    modes_file.FORMAT: modes_file.load_modes,
-    reduced_file.FORMAT: reduced_file.load_reduced,
+_READERS: dict[str, Callable[[hdf5.Source], Record]] = {
+    model_file.FORMAT: model_file.read_model_file,
+    modes_file.FORMAT: modes_file.read_modes_file,
+    reduced_file.FORMAT: reduced_file.read_reduced_file,
 }
 
 
@@ -30,12 +30,12 @@ def load(path: PathLike) -> Record:
     """
     with hdf5.opened(path) as source:
         stated = hdf5.text_attribute(source, source.file, "format", model_file.FORMAT)
-    if stated not in _LOADERS:
-        close = difflib.get_close_matches(stated, _LOADERS, 1)
-        remedy = f'did you mean "{close[0]}"?' if close else ""
-        expected = ", ".join(f'"{name}"' for name in _LOADERS)
-        raise FileError("unknown format", expected=expected, got=repr(stated)[:60], where=source.path, remedy=remedy)
-    return _LOADERS[stated](path)
+        if stated in _READERS:
+            return _READERS[stated](source)
+    close = difflib.get_close_matches(stated, _READERS, 1)
+    remedy = f'did you mean "{close[0]}"?' if close else ""
+    expected = ", ".join(f'"{name}"' for name in _READERS)
+    raise FileError("unknown format", expected=expected, got=repr(stated)[:60], where=source.path, remedy=remedy)
 
 
 def save(path: PathLike, record: Record) -> None:

@@ -19,6 +19,7 @@ import h5py
 import numpy as np
 
 from modesieve.io.atomic import PathLike
+from modesieve.io.hdf5_heap import Heap
 from modesieve.reduce.errors import FileError
 
 Node: TypeAlias = Any  # h5py.Group or h5py.Dataset; h5py ships no types
@@ -67,6 +68,7 @@ class Source:
     path: str
     file: Node
     budget: Budget
+    heap: Heap
 
     def at(self, place: str) -> str:
         """File and place for a message."""
@@ -110,7 +112,7 @@ def opened(path: PathLike) -> Iterator[Source]:
             remedy="copy or write the file again",
         ) from error
     with file:
-        yield Source(path=text, file=file, budget=Budget(text, size))
+        yield Source(path=text, file=file, budget=Budget(text, size), heap=Heap(text, size))
 
 
 # ---- nodes ---------------------------------------------------------------------------------------------------------
@@ -129,7 +131,7 @@ def child(source: Source, group: Node, name: str) -> Node | None:
 def names(group: Node, where: str) -> tuple[str, ...]:
     """Names in a group, the first thousand."""
     with reading(where):
-        return tuple(islice(group, 1000))
+        return tuple(_printable(name) for name in islice(group, 1000))
 
 
 def is_group(node: Node) -> bool:
@@ -182,7 +184,7 @@ def _inside(link: Any, where: str, links: int) -> str:
 def attribute_names(node: Node, where: str) -> tuple[str, ...]:
     """Names of the attributes, the first thousand."""
     with reading(where):
-        return tuple(islice(node.attrs, 1000))
+        return tuple(_printable(name) for name in islice(node.attrs, 1000))
 
 
 def attribute(source: Source, node: Node, name: str) -> Any:
@@ -199,6 +201,8 @@ def attribute(source: Source, node: Node, name: str) -> Any:
     content = content_of(dtype, where)
     if shape is None or np.prod([int(s) for s in shape], dtype=object) * dtype.itemsize > 1 << 20:
         raise FileError("the attribute has the wrong size", expected="a value", got=f"shape {shape}", where=where)
+    if dtype.kind == "O":
+        source.heap.check(where)
     with reading(where):
         value = node.attrs[name]
     if content == "text":
@@ -239,6 +243,11 @@ def _wrong_attribute(source: Source, node: Node, name: str, expected: str, value
     if not isinstance(value, str) and value.size == 1:
         got = str(value.ravel()[0])
     return FileError("the attribute has the wrong type or value", expected=expected, got=got, where=where)
+
+
+def _printable(name: str | bytes) -> str:
+    # Names that are not UTF-8 come as bytes.
+    return name if isinstance(name, str) else name.decode("utf-8", "replace")
 
 
 def content_of(dtype: np.dtype[Any], where: str) -> Literal["real", "complex", "text"]:

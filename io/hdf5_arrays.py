@@ -69,6 +69,8 @@ def array(source: Source, node: Node, place: str = "") -> Array:
             where=where,
             remedy="write the file with gzip or without compression",
         )
+    if dtype.kind == "O":
+        source.heap.check(where)
     shape = tuple(int(s) for s in shape)
     out = Array(
         source=source,

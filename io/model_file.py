@@ -105,12 +105,17 @@ def load_model(path: PathLike, places: Mapping[str, str | Place] | None = None) 
     together, UnitError for units that do not.
     """
     with hdf5.opened(path) as source:
-        root = source.file
-        if hdf5.text_attribute(source, root, "format") == "modesieve reduced model":
-            root = hdf5.find(source, "/model")
-            if root is None:
-                raise FileError("the file holds no small model", expected="a group /model", where=source.path)
-        return read_model(source, root, _as_places(places or {}))
+        return read_model_file(source, places)
+
+
+def read_model_file(source: Source, places: Mapping[str, str | Place] | None = None) -> Model:
+    """Read the model of an opened file."""
+    root = source.file
+    if hdf5.text_attribute(source, root, "format") == "modesieve reduced model":
+        root = hdf5.find(source, "/model")
+        if root is None:
+            raise FileError("the file holds no small model", expected="a group /model", where=source.path)
+    return read_model(source, root, _as_places(places or {}))
 
 
 def read_model(source: Source, root: Node, places: Mapping[str, Place]) -> Model:

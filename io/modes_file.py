@@ -38,11 +38,7 @@ def load_modes(path: PathLike, model: Model | None = None) -> Modes:
     Raises FileError for a damaged file, one of another kind, or modes of another model.
     """
     with hdf5.opened(path) as source:
-        check_format(source, FORMAT, VERSION)
-        modes = read_modes(
-            source, source.file, model=model, vectors=_shapes_in(source, "vectors"), left=_shapes_in(source, "left")
-        )
-        _check_vectors(modes, source)
+        modes = read_modes_file(source, model)
     if model is not None and fingerprint(model) != modes.origin.fingerprint:
         raise FileError(
             "the modes belong to another model",
@@ -51,6 +47,15 @@ def load_modes(path: PathLike, model: Model | None = None) -> Modes:
             where=str(path),
             remedy="compute the modes again; matrices, damping or channels have changed",
         )
+    return modes
+
+
+def read_modes_file(source: Source, model: Model | None = None) -> Modes:
+    """Read the modes of an opened file; ``model`` is taken unchecked."""
+    check_format(source, FORMAT, VERSION)
+    shapes = {name: _shapes_in(source, name) for name in ("vectors", "left")}
+    modes = read_modes(source, source.file, model=model, **shapes)
+    check_shapes(modes, {"vectors": "nk", "left": "nk"}, source.path, n=modes.origin.n, k=len(modes))
     return modes
 
 
@@ -136,7 +141,3 @@ def _shapes_in(source: Source, name: str) -> Any:
         return None
     data = array(source, node)
     return read_numbers(source, node, np.complex128 if data.content == "complex" else np.float64, f"/{name}")
-
-
-def _check_vectors(modes: Modes, source: Source) -> None:
-    check_shapes(modes, {"vectors": "nk", "left": "nk"}, source.path, n=modes.origin.n, k=len(modes))

@@ -44,20 +44,25 @@ def load_reduced(path: PathLike) -> ReducedModel:
     The full model and the mode shapes are not part of the file. Raises FileError for a damaged file or another kind.
     """
     with hdf5.opened(path) as source:
-        check_format(source, FORMAT, VERSION)
-        file = source.file
-        modes = read_modes(source, file)
-        return read_record(
-            source,
-            group(source, file, "result"),
-            ReducedModel,
-            modes=modes,
-            kept=_kept(source, file, modes),
-            system=_system(source, file, modes),
-            statics=_statics(source, file),
-            samples=_samples(source, file, modes),
-            ranking=_ranking(source, file, modes),
-        )
+        return read_reduced_file(source)
+
+
+def read_reduced_file(source: Source) -> ReducedModel:
+    """Read the reduced model of an opened file."""
+    check_format(source, FORMAT, VERSION)
+    file = source.file
+    modes = read_modes(source, file)
+    return read_record(
+        source,
+        group(source, file, "result"),
+        ReducedModel,
+        modes=modes,
+        kept=_kept(source, file, modes),
+        system=_system(source, file, modes),
+        statics=_statics(source, file),
+        samples=_samples(source, file, modes),
+        ranking=_ranking(source, file, modes),
+    )
 
 
 def write_reduced(file: Node, small: ReducedModel) -> None:
