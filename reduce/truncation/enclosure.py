@@ -18,7 +18,7 @@ from typing import Any
 import numpy as np
 
 from modesieve.reduce.arrays import Complex, Ints, Real
-from modesieve.reduce.response.norms import largest_singular_value
+from modesieve.reduce.response.norms import frobenius, largest_singular_value
 from modesieve.reduce.truncation.diagonal import Diagonal
 
 _ORDER = 6
@@ -105,6 +105,76 @@ def enclose(f: Rational, left: Real, right: Real) -> Enclosure:
     step = max(1, _PIECE // max(1, _ORDER * f.Q.shape[1] * f.Q.shape[2]))
     parts = [_enclose(f, left[i : i + step], right[i : i + step]) for i in range(0, len(left), step)]
     return Enclosure(**{n: np.concatenate([getattr(e, n) for e in parts]) for n in ("middle", "upper", "lower")})
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Expansion:
+    """Taylor coefficients about the middles, J of (w, r, q), and bounds of everything after: ``remainder`` of the norm
+    (w,) and ``columns`` of the norm of every column (w, q), both already times s^J; s (w,): half widths."""
+
+    coefficients: list[Complex]
+    remainder: Real
+    columns: Real
+    s: Real
+
+
+@np.errstate(invalid="ignore", over="ignore", divide="ignore")
+def expand(f: Rational, left: Real, right: Real) -> Expansion:
+    """f over intervals as a polynomial with a proved remainder; for a few hundred intervals."""
+    s = (right - left) / 2
+    rest = _remainder(f, np.abs(f.Q), left, right)
+    columns = s[:, None] ** _ORDER * np.einsum("k,wkq->wq", np.linalg.norm(f.L, axis=0), rest)
+    size = np.linalg.norm(f.L, axis=0) * np.linalg.norm(f.Q, axis=2)
+    whole = s**_ORDER * _remainder(f, size[:, :, None], left, right)[:, :, 0].sum(axis=1)
+    return Expansion(coefficients=_taylor(f, (left + right) / 2, _ORDER), remainder=whole, columns=columns, s=s)
+
+
+@np.errstate(invalid="ignore", over="ignore")
+def product_norm(one: Expansion, other: Expansion) -> tuple[Real, Real]:
+    """No smaller than ``norm(f^T g)``, (w,), and than every entry's absolute value, (w, p, m), in each interval."""
+    s, J = one.s, len(one.coefficients)
+    terms = [_convolved(one.coefficients, other.coefficients, k) for k in range(2 * J - 1)]
+    wide = s[:, None, None]
+    ends = (terms[0] - wide * terms[1], terms[0] + wide * terms[1])
+    norm = np.maximum(largest_singular_value(ends[0]), largest_singular_value(ends[1]))
+    entry = np.maximum(np.abs(ends[0]), np.abs(ends[1]))
+    for k in range(2, 2 * J - 1):
+        norm = norm + s**k * frobenius(terms[k])
+        entry = entry + wide**k * np.abs(terms[k])
+    sizes = [_sizes(part) for part in (one, other)]
+    (f, f_columns), (g, g_columns) = sizes
+    norm = norm + one.remainder * (g + other.remainder) + other.remainder * f
+    a, b = one.columns[:, :, None], other.columns[:, None, :]
+    entry = entry + a * (g_columns[:, None, :] + b) + b * f_columns[:, :, None]
+    return _inf(norm), _inf(entry)
+
+
+def _convolved(one: list[Complex], other: list[Complex], k: int) -> Complex:
+    J = len(one)
+    return sum(  # type: ignore[return-value]
+        np.swapaxes(one[i], 1, 2) @ other[k - i] for i in range(max(0, k - J + 1), min(J, k + 1))
+    )
+
+
+def _sizes(part: Expansion) -> tuple[Real, Real]:
+    """Bounds of the polynomial's norm (w,) and of its columns' norms (w, q) over the interval."""
+    columns = sum(
+        part.s[:, None] ** j * np.sqrt(np.sum(np.abs(F) ** 2, axis=1)) for j, F in enumerate(part.coefficients)
+    )
+    return np.sqrt(np.sum(np.asarray(columns) ** 2, axis=1)), np.asarray(columns)
+
+
+def upper_norm(part: Expansion) -> tuple[Real, Real]:
+    """No smaller than the norm, (w,), and than every column's norm, (w, q), in each interval."""
+    F, s = part.coefficients, part.s
+    wide = s[:, None, None]
+    ends = (F[0] - wide * F[1], F[0] + wide * F[1])
+    norm = np.maximum(largest_singular_value(ends[0]), largest_singular_value(ends[1]))
+    columns = np.sqrt(np.maximum(np.sum(np.abs(ends[0]) ** 2, axis=1), np.sum(np.abs(ends[1]) ** 2, axis=1)))
+    for j in range(2, len(F)):
+        norm = norm + s**j * frobenius(F[j])
+        columns = columns + s[:, None] ** j * np.sqrt(np.sum(np.abs(F[j]) ** 2, axis=1))
+    return _inf(norm + part.remainder), _inf(columns + part.columns)
 
 
 def entries(f: Rational, left: Real, right: Real) -> Real:

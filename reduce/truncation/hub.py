@@ -1,15 +1,21 @@
 """The hub: one reference model that knows how wrong it is, so that every small model can be held against it.
 
 The hub H is the Galerkin model of the full model G on all computed modes and a few tail levels. With the residuals
-``r = F - Z V z`` and ``r' = C^T - Z^T V z'`` of its primal and dual problems (free of the computed modes),
+``r = F - Z V z`` and ``r' = C^T - Z^T V z'`` of its primal and dual problems (free of the computed modes) and norms in
+``K_s^-1``, ``K_s = K - sigma M``,
 
-    norm(G - H) <= q(w) norm(r)_{K_s^-1} norm(r')_{K_s^-1},   K_s = K - sigma M,
-    q(w) = sup over x >= x_c of (x - sigma)/abs(a x + b),
+    norm(G - H) <= q(w) norm(r) norm(r'),   q(w) = sup over x >= x_c of abs(f(x)),   f(x) = (x - sigma)/(a x + b),
+    norm(G - H) <= abs(c(w)) norm(r'^T K_s^-1 r) + rho(w) norm(r) norm(r'),
 
-and for any other model R, whatever it is made of, ``abs(norm(G - R) - norm(H - R)) <= norm(G - H)``. The spectral
-estimate of the residual product is the Cauchy-Schwarz step of a posteriori bounds for reduced linear systems (e.g.
-Antoulas, Approximation of Large-Scale Dynamical Systems, SIAM 2005); the supremum over the uncomputed part needs a
-complete list of modes below x_c (Sylvester's law of inertia).
+whichever is smaller; c and rho are centre and radius of a disc that holds f(x) for all x >= x_c. The product of the
+residuals is known, and only the spread of f is paid for with their norms: distant ports, whose residuals have little in
+common, are not charged as if they were one. For any other model R, whatever it is made of,
+
+    abs(norm(G - R) - norm(H - R)) <= norm(G - H).
+
+The first form is the Cauchy-Schwarz step of a posteriori bounds for reduced linear systems (e.g. Antoulas,
+Approximation of Large-Scale Dynamical Systems, SIAM 2005); the supremum over the uncomputed part needs a complete list
+of modes below x_c (Sylvester's law of inertia).
 """
 
 from __future__ import annotations
@@ -169,9 +175,15 @@ class Hub:
         """The bound without rounding, for at most a few hundred frequencies: weighted (w,) and entries (w, p, m)."""
         load, out = self.residuals(omega)
         q = self.rest.supremum(omega, self.x_c, self.sigma)
+        centre, radius = self.rest.disc(omega, self.x_c, self.sigma)
         with np.errstate(invalid="ignore", over="ignore"):
-            entry = q[:, None, None] * (_column_norms(out)[:, :, None] * _column_norms(load)[:, None, :])
-            total = q * largest_singular_value(load * self.amplitudes) * largest_singular_value(out / self.resolutions)
+            size = _column_norms(out)[:, :, None] * _column_norms(load)[:, None, :]
+            seen = np.abs(centre)[:, None, None] * np.abs(np.swapaxes(out, 1, 2) @ load)
+            entry = np.fmin(q[:, None, None] * size, seen + radius[:, None, None] * size)
+            load, out = load * self.amplitudes, out / self.resolutions
+            whole = largest_singular_value(load) * largest_singular_value(out)
+            through = np.abs(centre) * largest_singular_value(np.swapaxes(out, 1, 2) @ load)
+            total = np.fmin(q * whole, through + radius * whole)
         return _no_nan(total), _no_nan(entry)
 
 

@@ -68,6 +68,27 @@ class Rest:
         distance = np.abs((np.conj(d) * a).imag) / np.sqrt(np.where(size > 0, size, 1.0))
         return 1.0 / np.where(inside, distance, np.abs(a + d * np.clip(foot, 0.0, u_c)))
 
+    @np.errstate(divide="ignore", invalid="ignore")
+    def disc(self, omega: Real, x_c: float, sigma: float) -> tuple[Complex, Real]:
+        """Centre (w,) and radius (w,) of the smallest disc that holds ``(x - sigma)/(a x + b)`` for every x >= x_c.
+
+        The values lie on the arc that inversion makes of the segment ``[a, a + d u_c]``, from 1/a to 1/(a + d u_c). Up
+        to a half circle its chord is a diameter of the disc; beyond (the ends are seen from 0 under more than a right
+        angle) the disc is the whole circle, which has 0 and one over the foot of the perpendicular at opposite ends.
+        """
+        a, b = self.coefficients(omega)
+        u_c = 0.0 if np.isinf(x_c) else 1.0 / (x_c - sigma)
+        d = a * sigma + b
+        end = a + d * u_c
+        short = (np.conj(a) * end).real >= 0
+        one, other = 1 / a, 1 / end
+        size = np.where(np.abs(d) > 0, np.abs(d), 1.0)
+        foot = 1j * d / size * ((np.conj(d) * a).imag / size)
+        centre = np.where(short, (one + other) / 2, 1 / (2 * foot))
+        radius = np.where(short, np.abs(one - other) / 2, 1 / (2 * np.abs(foot)))
+        known = np.isfinite(centre) & np.isfinite(radius)
+        return np.where(known, centre, 0.0), np.where(known, radius, np.inf)
+
     @property
     def formula(self) -> str:
         """The law in words, for the certificate."""

@@ -16,7 +16,17 @@ import numpy as np
 from modesieve.reduce.arrays import Complex, Real
 from modesieve.reduce.response.norms import frobenius
 from modesieve.reduce.truncation.diagonal import Diagonal
-from modesieve.reduce.truncation.enclosure import Rational, difference, enclose, entries, nearest, transposed
+from modesieve.reduce.truncation.enclosure import (
+    Rational,
+    difference,
+    enclose,
+    entries,
+    expand,
+    nearest,
+    product_norm,
+    transposed,
+    upper_norm,
+)
 from modesieve.reduce.truncation.hub import Hub
 
 #: Upper bounds of some quantities over every interval, and their values in the middles: (w, q) each.
@@ -114,24 +124,37 @@ class Gap:
 
 def hub_suprema(hub: Hub, left: Real, right: Real) -> tuple[Real, Real]:
     """No smaller than ``e_H(w)`` anywhere in each interval, and its value in the middle (rounding as for all), (w,)."""
-    q = supremum_factor(hub, left, right)
-    load, out = residual_functions(hub)
-    with np.errstate(invalid="ignore", over="ignore"):
-        product = q * enclose(load, left, right).upper * enclose(out, left, right).upper
+    own = _hub_bounds(hub, left, right)
     widened = frobenius(hub.weigh(_rounding(hub, left, right)))
-    return _inf(product) + widened, hub.galerkin((left + right) / 2)[0] + widened
+    return own.total + widened, hub.galerkin((left + right) / 2)[0] + widened
 
 
 def hub_entry_suprema(hub: Hub, left: Real, right: Real) -> tuple[Real, Real]:
     """The same for every weighted entry, (w, p, m)."""
-    q = supremum_factor(hub, left, right)
-    load, out = residual_functions(hub)
-    with np.errstate(invalid="ignore", over="ignore"):
-        columns = [np.sqrt(np.sum(entries(f, left, right) ** 2, axis=1)) for f in (load, out)]
-        product = q[:, None, None] * columns[1][:, :, None] * columns[0][:, None, :]
+    own = _hub_bounds(hub, left, right)
     widened = np.abs(hub.weigh(_rounding(hub, left, right)))
     here = np.abs(hub.weigh(hub.galerkin((left + right) / 2)[1]))
-    return _inf(product) + widened, here + widened
+    return own.entry + widened, here + widened
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class _HubBounds:
+    total: Real
+    entry: Real
+
+
+@np.errstate(invalid="ignore", over="ignore")
+def _hub_bounds(hub: Hub, left: Real, right: Real) -> _HubBounds:
+    """The two forms of the hub's bound over intervals, the smaller of both; weighted."""
+    load, out = (expand(f, left, right) for f in residual_functions(hub))
+    q, centre, radius = spread(hub, left, right)
+    through, through_entry = product_norm(out, load)
+    norms, columns = zip(*(upper_norm(part) for part in (out, load)), strict=True)
+    size = columns[0][:, :, None] * columns[1][:, None, :]
+    wide = (slice(None), None, None)
+    total = np.fmin(q * norms[0] * norms[1], centre * through + radius * norms[0] * norms[1])
+    entry = np.fmin(q[wide] * size, centre[wide] * through_entry + radius[wide] * size)
+    return _HubBounds(total=_inf(total), entry=_inf(entry))
 
 
 def residual_functions(hub: Hub) -> tuple[Rational, Rational]:
@@ -149,17 +172,25 @@ def residual_functions(hub: Hub) -> tuple[Rational, Rational]:
     return load, out
 
 
-def supremum_factor(hub: Hub, left: Real, right: Real) -> Real:
-    """No smaller than ``q(w)`` anywhere in each interval: one over a distance that changes at most so fast with w."""
-    rest, s = hub.rest, (right - left) / 2
+def spread(hub: Hub, left: Real, right: Real) -> tuple[Real, Real, Real]:
+    """Over each interval: no smaller than ``q(w)``; a disc (abs of its centre, radius) that holds the factor for all w.
+
+    For every u the denominator ``a + d u`` changes at most by ``slope s`` from the middle; the middle's disc is widened
+    by what that makes of the quotient.
+    """
+    rest, s, middle = hub.rest, (right - left) / 2, (left + right) / 2
     u_c = 0.0 if np.isinf(hub.x_c) else 1 / (hub.x_c - hub.sigma)
     if rest.order == 1:
         slope = np.full_like(s, u_c)
     else:
         slope = abs(rest.beta) + u_c * (abs(hub.sigma * rest.beta + rest.alpha) + 2 * right)
-    with np.errstate(divide="ignore"):
-        distance = 1 / rest.supremum((left + right) / 2, hub.x_c, hub.sigma) - slope * s
-    return np.where(distance > 0, 1 / np.where(distance > 0, distance, 1.0), np.inf)
+    here = rest.supremum(middle, hub.x_c, hub.sigma)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        distance = 1 / here - slope * s
+        q = np.where(distance > 0, 1 / np.where(distance > 0, distance, 1.0), np.inf)
+        centre, radius = rest.disc(middle, hub.x_c, hub.sigma)
+        radius = _inf(radius + slope * s * here * q)
+    return q, np.abs(centre), radius
 
 
 def _shift_polynomial(hub: Hub) -> Complex:

@@ -133,19 +133,21 @@ class Case:
     shifted: DenseShift
     label: str
 
-    def response(self, omega):
-        """Exact ``G(j w)`` (w, p, m): every mode and every massless direction."""
+    def response(self, omega, elastic=False):
+        """Exact ``G(j w)`` (w, p, m): every mode (rigid-body ones left out if elastic) and every massless direction."""
         model, truth = self.model, self.truth
         q, v, a = output_parts(model)
         D = model.D if isinstance(model, Thermal) else model.Du
         counted = np.arange(len(truth.x)) < len(self.modes)
         b, s = truth.phi.T @ model.F, truth.still.T @ model.F
+        b = np.where((truth.x == 0)[:, None] & elastic, 0.0, b)
         out = []
         for w in np.atleast_1d(omega):
             C = q + 1j * w * v - w**2 * a
             with np.errstate(divide="ignore", invalid="ignore"):
                 h = 1 / law(model, w, truth.x, counted, None)
             with np.errstate(invalid="ignore"):
+                h = np.where((truth.x == 0) & elastic, 0.0, h)
                 G = (C @ truth.phi * h) @ b + C @ truth.still @ s / stiffness_law(model, w) + D
             out.append(G)
         return np.array(out)

@@ -11,7 +11,7 @@ from modesieve.reduce.truncation.build import build_hub
 from modesieve.reduce.truncation.certify import certify, grid_of
 from modesieve.reduce.truncation.diagonal import diagonal
 from modesieve.reduce.truncation.enclosure import enclose, entries
-from modesieve.reduce.truncation.supremum import Gap, hub_suprema, residual_functions, suprema, supremum_factor
+from modesieve.reduce.truncation.supremum import Gap, hub_suprema, residual_functions, spread, suprema
 from modesieve.reduce.truncation.tails import with_tail_levels
 
 
@@ -49,7 +49,7 @@ def test_nothing_exceeds_an_enclosure_inside_its_interval(form, levels):
         assert np.all(middle <= upper * (1 + 1e-12))
         assert np.all(hub.error(w).reshape(len(left), -1).max(axis=1) <= hub_suprema(hub, left, right)[0] * (1 + 1e-9))
         factor = hub.rest.supremum(w, hub.x_c, hub.sigma).reshape(len(left), -1)
-        assert np.all(factor.max(axis=1) <= supremum_factor(hub, left, right) * (1 + 1e-12))
+        assert np.all(factor.max(axis=1) <= spread(hub, left, right)[0] * (1 + 1e-12))
         whole = (np.abs(difference) + hub.entry_error(w)).reshape(len(left), 60, -1)
         assert np.all(whole.max(axis=1) <= gap.per_entry(left, right)[0] * (1 + 1e-6) + slack)
 
