@@ -48,13 +48,13 @@ def mast() -> Demo:
         body,
         fixed=[body.row(i, d) for i in range(4) for d in ("x", "y", "z", "rx", "ry", "rz")],
         loads=[
-            (body.row(top, "x"), Input(name="wind at lantern", unit="N", amplitude=400.0)),
-            (body.row(deck, "y"), Input(name="winch at deck", unit="N", amplitude=900.0)),
+            (body.row(top, "x"), Input(name="wind at lantern", unit="N", amplitude=4.0)),
+            (body.row(deck, "y"), Input(name="winch at deck", unit="N", amplitude=60.0)),
         ],
         sensors=[
-            (body.row(top, "x"), Output(name="lantern x", unit="m", resolution=1e-4)),
-            (body.row(top, "y"), Output(name="lantern y", unit="m", resolution=1e-4)),
-            (body.row(deck + 2, "x"), Output(name="deck x", unit="m", resolution=1e-4)),
+            (body.row(top, "x"), Output(name="lantern x", unit="m", resolution=1e-6)),
+            (body.row(top, "y"), Output(name="lantern y", unit="m", resolution=1e-6)),
+            (body.row(deck + 2, "x"), Output(name="deck x", unit="m", resolution=1e-6)),
         ],
         damping=Damping(base=ModalRatio(ratio=0.004)),
         title="lantern mast, Gull Mole",

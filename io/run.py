@@ -20,6 +20,7 @@ from modesieve.reduce.modal.rank import rank
 from modesieve.reduce.modal.records import Modes, Ranking
 from modesieve.reduce.model import Model
 from modesieve.reduce.progress import Listener
+from modesieve.reduce.truncation.promise import with_guarantee
 from modesieve.reduce.truncation.records import ReducedModel
 from modesieve.reduce.truncation.truncate import truncate
 
@@ -64,6 +65,7 @@ def run(model: Model, settings: Settings, progress: Listener = None) -> Result:
         band=settings.band,
         progress=progress,
     )
+    small = with_guarantee(small, progress)
     comparison = compare(
         model,
         [small],

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -60,13 +61,20 @@ def verdict_of(comparison: Comparison, check: Check) -> Verdict:
 
 
 def leading(check: Check) -> ErrorFigure:
-    """The error that the choice asked for: of local unless a tolerance said peak or a size with a unit."""
-    choice = check.small.choice
+    """The error that the choice asked for: of local unless a tolerance said peak or a size with a unit.
+
+    Guaranteed where the small model carries a guarantee, else as the comparison has it.
+    """
+    choice, guarantee = check.small.choice, check.small.guarantee
     of = choice.of if isinstance(choice, Tolerance) else "local"
+    source: Any = guarantee if guarantee is not None and guarantee.holds else None
     if of == "absolute" and check.absolute:
-        fitting = [figure for figure in check.absolute if figure.unit == choice.unit] or list(check.absolute)
+        figures = (source.absolute if source is not None else ()) or check.absolute
+        fitting = [figure for figure in figures if figure.unit == choice.unit] or list(figures)
         return max(fitting, key=lambda figure: figure.value)
-    return check.peak_error if of == "peak" else check.local_error
+    measured = check.peak_error if of == "peak" else check.local_error
+    proved = None if source is None else source.peak if of == "peak" else source.local
+    return measured if proved is None else proved
 
 
 def kept_words(small: ReducedModel) -> str:
@@ -129,7 +137,7 @@ def band_end(omega: float, kind: str) -> str:
 
 def _lines(comparison: Comparison, check: Check) -> tuple[Line, ...]:
     index = next((i for i, one in enumerate(comparison.checks) if one is check), 0)
-    steps = step_errors(comparison.step, index)
+    steps = step_errors(comparison.step, index) if _steps_tell(comparison, check) else None
     peaks = (np.abs(comparison.full.G) * comparison.modes.origin.amplitudes).sum(axis=2).max(axis=0, initial=0.0)
     outputs = comparison.modes.origin.outputs
     return tuple(
@@ -139,10 +147,17 @@ def _lines(comparison: Comparison, check: Check) -> tuple[Line, ...]:
             error=format_quantity(figure.value, figure.unit) if figure.defined else "undefined",
             certainty=figure.certainty,
             step="" if steps is None else format_quantity(float(steps[k]), output.unit),
-            step_certainty="" if comparison.step is None else comparison.step.certainty,
+            step_certainty="" if steps is None or comparison.step is None else comparison.step.certainty,
         )
         for k, (output, figure) in enumerate(zip(outputs, check.absolute, strict=True))
     )
+
+
+def _steps_tell(comparison: Comparison, check: Check) -> bool:
+    # Where not all modes are known, the full curve in time holds the rest by its statics alone: a small model with tail
+    # levels is closer to the truth than that, and their difference says nothing about it.
+    step = comparison.step
+    return step is not None and (step.certainty != "estimated" or check.small.statics != "vectors")
 
 
 def step_errors(step: TimeResponse | None, index: int) -> np.ndarray[tuple[int], np.dtype[np.float64]] | None:
