@@ -50,6 +50,10 @@ class Factor(Protocol):
     nonzeros: int
     memory_bytes: int
 
+    @property
+    def alive(self) -> bool:
+        """False after release."""
+
     def solve(self, B: Any) -> Any:
         """Solution of ``A X = B`` for B (n,) or (n, k), real or complex."""
 

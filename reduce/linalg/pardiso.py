@@ -115,6 +115,11 @@ class PardisoFactor:
         self._analyse()
         self._factorise()
 
+    @property
+    def alive(self) -> bool:
+        """False after release."""
+        return self._alive
+
     def solve(self, B: Any) -> Any:
         """Solution of ``A X = B``, shape of B kept, columns contiguous."""
         B = np.asarray(B)

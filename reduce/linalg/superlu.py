@@ -52,6 +52,11 @@ class SuperLUFactor:
         if not self._sound:
             self._lu = _symmetric_lu(permuted, 1.0)
 
+    @property
+    def alive(self) -> bool:
+        """False after release."""
+        return self._lu is not None
+
     def solve(self, B: Any) -> Any:
         """Solution of ``A X = B``, shape of B kept."""
         B = np.asarray(B)

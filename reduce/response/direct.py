@@ -12,7 +12,11 @@ import scipy.sparse as sp
 from modesieve.reduce.arrays import Complex
 from modesieve.reduce.errors import SolveError
 from modesieve.reduce.linalg.factor import SolverName, factorise
+from modesieve.reduce.linalg.shift import regular
 from modesieve.reduce.response.dynamic import Dynamic
+
+#: Singular to working precision: an answer this many times ``norm(F)/norm(Z)`` that leaves this relative residual.
+BLOWN_UP, LEFT_OVER = 1e11, 1e-3
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -50,6 +54,8 @@ def solve_at(dynamic: Dynamic, omega: float, *, solver: SolverName, tolerance: f
     solve, name = _inverse(dynamic, omega, solver)
     X, solves = solve(dynamic.F.astype(complex)), dynamic.F.shape[1]
     R, backward, relative = errors(dynamic, omega, X)
+    if not _is_answer(dynamic, omega, X, relative):
+        raise SolveError("the matrix is singular to working precision", where=f"omega = {omega:.6g} rad/s")
     for _ in range(refine):
         if backward <= tolerance / 100:
             break
@@ -60,6 +66,27 @@ def solve_at(dynamic: Dynamic, omega: float, *, solver: SolverName, tolerance: f
             break
         X, R, backward, relative = better, R_new, b_new, r_new
     return Answer(X=X, backward_error=backward, residual=relative, solves=solves, solver=name)
+
+
+def _is_answer(dynamic: Dynamic, omega: float, X: Complex, relative: float) -> bool:
+    """False for the vector that rounding (or a perturbed pivot) makes of a singular system: large enough to pass any
+    backward error, it leaves the load unanswered. A free body at rest is asked directly: its load may be balanced."""
+    x, f = np.linalg.norm(X, axis=0), np.linalg.norm(dynamic.F, axis=0)
+    if not np.all(np.isfinite(x)):
+        return False
+    if relative > LEFT_OVER and np.any(dynamic.norm(omega) * x > BLOWN_UP * f):
+        return False
+    return omega != 0 or not dynamic.symmetric or _is_regular(dynamic)
+
+
+def _is_regular(dynamic: Dynamic) -> bool:
+    """True when K of a symmetric pencil is regular to working precision."""
+    K, M = dynamic.pencil
+    try:
+        factor = factorise(K, symmetry="indefinite", solver="auto")
+        return regular(K, M, factor, 0)
+    except SolveError:
+        return False
 
 
 def _inverse(dynamic: Dynamic, omega: float, solver: SolverName) -> tuple[Any, str]:

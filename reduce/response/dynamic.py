@@ -10,7 +10,7 @@ U = M Phi and d = 2 zeta omega are the counted modes and their damping when the 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -50,6 +50,7 @@ class Dynamic:
     pencil: tuple[Any, Any]
     U: Real | None = None
     d: Real | None = None
+    kept: dict[str, Any] = field(default_factory=dict, repr=False)  # what is computed once
 
     @property
     def n(self) -> int:
@@ -74,9 +75,13 @@ class Dynamic:
         for factor, A in zip(self.coefficients(omega), self.parts, strict=True):
             if factor != 0:
                 out += factor * times(A, X)
-        if self.U is not None and self.d is not None:
-            out += 1j * omega * (self.U @ (self.d[:, None] * (self.U.T @ X)))
-        return out
+        return out + self.low_rank(omega, X)
+
+    def low_rank(self, omega: float, X: Complex) -> Complex | float:
+        """``j w U diag(d) U^T X``, 0 where there is no such part."""
+        if self.U is None or self.d is None:
+            return 0.0
+        return 1j * omega * (self.U @ (self.d[:, None] * (self.U.T @ X)))
 
     def response(self, omega: float, X: Complex) -> Complex:
         """``C(w) X + D``, shape (p, m)."""
@@ -86,19 +91,26 @@ class Dynamic:
         return out
 
     def norm(self, omega: float) -> float:
-        """A bound of the infinity norm of Z(w): the row sums of its parts, weighted and added."""
-        total = np.zeros(self.n)
-        for factor, rows in zip(self.coefficients(omega), self.row_sums, strict=True):
-            total += abs(factor) * rows
-        return float(total.max(initial=0.0))
+        """A lower bound of the 2-norm of Z(w), so that a backward error is never flattered: its largest diagonal entry,
+        or the norm of a row of its largest part less those of the others."""
+        c = self.coefficients(omega)
+        diagonal, rows = self._sizes
+        entries = np.abs(sum(factor * d for factor, d in zip(c, diagonal, strict=True)))
+        weighted = np.sort(np.abs(c)[:, None] * rows, axis=0)
+        return float(max(entries.max(initial=0.0), (2 * weighted[-1] - weighted.sum(axis=0)).max(initial=0.0)))
 
     @property
-    def row_sums(self) -> tuple[Real, ...]:
-        """``abs(A_i)`` summed over columns, each (n,)."""
-        if not hasattr(self, "_rows"):
-            object.__setattr__(self, "_rows", tuple(np.asarray(abs(A).sum(axis=1)).ravel() for A in self.parts))
-        rows: tuple[Real, ...] = getattr(self, "_rows")  # noqa: B009
-        return rows
+    def _sizes(self) -> tuple[list[Real], Real]:
+        """Diagonals of the parts, and 2-norms of their rows (parts, n); computed once."""
+        if "sizes" not in self.kept:
+            rows = np.array([np.sqrt(_squares(A)) for A in self.parts])
+            self.kept["sizes"] = ([np.asarray(A.diagonal()) for A in self.parts], rows)
+        sizes: tuple[list[Real], Real] = self.kept["sizes"]
+        return sizes
+
+
+def _squares(A: Any) -> Any:
+    return np.asarray((A.multiply(A) if sp.issparse(A) else A * A).sum(axis=1)).ravel()
 
 
 def times(A: Any, X: Any) -> Any:
