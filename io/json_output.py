@@ -123,8 +123,25 @@ def reduced_object(small: ReducedModel) -> Object:
         **_band(small.band),
         "error": None if small.error is None else figure_object(small.error),
         **({} if small.error is not None else {"error_reason": why}),
+        **_guarantee(small),
         "model": small.modes.origin.fingerprint,
         "notes": list(small.notes),
+    }
+
+
+def _guarantee(small: ReducedModel) -> Object:
+    """What is guaranteed, or why nothing is."""
+    found = small.guarantee
+    if found is None or not found.holds:
+        return {"guarantee": None, "guarantee_reason": "not asked for" if found is None else found.reason}
+    figures = {"peak": found.peak, "local": found.local}
+    return {
+        "guarantee": {
+            **{name: figure_object(figure) for name, figure in figures.items() if figure is not None},
+            "absolute": [_of_output(figure) for figure in found.absolute],
+            "formula": found.formula,
+            "spot_check_hz": [_hz(spot.omega) for spot in found.spot_checks],
+        }
     }
 
 

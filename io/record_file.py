@@ -23,18 +23,20 @@ from itertools import pairwise
 from typing import Any, Literal, TypeVar, Union, get_args, get_origin, get_type_hints
 
 import numpy as np
+from numpy.typing import NDArray
 
 from modesieve.io import hdf5
 from modesieve.io.hdf5 import Node, Source
 from modesieve.io.hdf5_arrays import array, read_real, read_texts, write_array
 from modesieve.io.labels_file import write_texts
 from modesieve.reduce.errors import FileError, ModesieveError
+from modesieve.reduce.truncation.hub import Hub
 from modesieve.reduce.truncation.records import Choice, ReducedModel
 
 R = TypeVar("R")
 
 #: What fields of type Any hold.
-TYPES: dict[tuple[type, str], Any] = {(ReducedModel, "choice"): Choice | str}
+TYPES: dict[tuple[type, str], Any] = {(ReducedModel, "choice"): Choice | str, (Hub, "floating"): NDArray[np.bool_]}
 _MOST = 1_000_000  # entries of a list in such a file
 
 

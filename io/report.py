@@ -12,13 +12,15 @@ from modesieve.io.tables import (
     cautions_report,
     checks_table,
     comparison_head,
+    guarantee_words,
     modes_head,
     modes_table,
     outputs_table,
     pairs_table,
     sweep_table,
 )
-from modesieve.io.terminal import screen, show
+from modesieve.io.terminal import labelled, screen, show
+from modesieve.reduce.truncation.records import ReducedModel
 
 
 def run_report(console: Console, result: Result) -> list[Any]:
@@ -38,12 +40,19 @@ def run_report(console: Console, result: Result) -> list[Any]:
         comparison_head(console, comparison),
         "",
         checks_table(console, comparison),
+        *guarantee_report(console, small),
     ]
     if pairs is not None:
         parts += ["", pairs]
     if comparison.sweep is not None:
         parts += ["", sweep_table(console, comparison.sweep, len(small.kept))]
     return [*parts, "", *cautions_report(console, verdict)]
+
+
+def guarantee_report(console: Console, small: ReducedModel) -> list[Any]:
+    """The guarantee in a line of its own."""
+    words = guarantee_words(small)
+    return ["", labelled(console, [("guarantee", words)])] if words else []
 
 
 def run_text(result: Result) -> str:

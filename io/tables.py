@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
+from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeAlias
 
 import numpy as np
@@ -222,8 +224,22 @@ def reduced_report(console: Console, small: ReducedModel) -> RenderableType:
         ("statics", small.statics + (f", {small.levels} tail levels" if small.levels else "")),
         ("band", band_words(small.band, small.modes)),
         ("error", str(small.error) if small.error is not None else "not measured"),
+        ("guarantee", guarantee_words(small)),
     ]
     return labelled(console, [*rows, *(("note", note) for note in small.notes)])
+
+
+def guarantee_words(small: ReducedModel) -> str:
+    """What is guaranteed over the band, or why nothing is; "" where nobody asked."""
+    found = small.guarantee
+    if found is None:
+        return ""
+    if not found.holds:
+        return f"none: {found.reason}"
+    figures = [figure for figure in (found.local, found.peak) if figure is not None and figure.defined]
+    sizes = ", ".join(f"{figure.size} of {figure.relative_to}" for figure in figures)
+    passed = sum(spot.passed for spot in found.spot_checks)
+    return f"at most {sizes} at every frequency; {passed} of {len(found.spot_checks)} spot checks passed"
 
 
 def band_words(band: tuple[float, float] | None, modes: Modes) -> str:
@@ -334,12 +350,17 @@ def cautions_report(console: Console, verdict: Verdict) -> list[Any]:
 
 
 def written_table(console: Console, written: Sequence[Written]) -> RenderableType:
-    """The files that a run left, and what each is for."""
-    return table(
-        console,
-        [("file", [str(one.path) for one in written]), ("holds", [one.purpose for one in written])],
-        left=(0, 1),
-    )
+    """The files that a run left and what each is for; the figures as one row."""
+    folder = Path(os.path.commonpath([one.path.parent for one in written]))
+    plates = [one for one in written if one.path.parent.name == "figures"]
+    rows = [(str(one.path.relative_to(folder)), one.purpose) for one in written if one not in plates]
+    if plates:
+        within = plates[0].path.parent.relative_to(folder)
+        kinds = sorted({one.path.suffix for one in plates})
+        names = dict.fromkeys(one.purpose for one in plates)
+        rows.append((", ".join(str(within / f"*{kind}") for kind in kinds), "figures: " + ", ".join(names)))
+    columns: list[Column] = [("file", [name for name, _ in rows]), ("holds", [purpose for _, purpose in rows])]
+    return table(console, columns, f"Written into {folder}", left=(0, 1), fold=(1,))
 
 
 # ---- inspection ------------------------------------------------------------------------------------------------------

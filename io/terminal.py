@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import sys
 from collections.abc import Iterable, Sequence
 from typing import IO, Any
@@ -13,6 +14,8 @@ from rich.text import Text
 
 WIDTH = 100
 _EIGHTHS = " ▏▎▍▌▋▊▉█"
+#: A number: what stands before the decimal point, and the rest with its unit.
+_NUMERIC = re.compile(r"([−-]?\d+)(\D.*|)")
 #: Stand-ins where the output's encoding has only ASCII.
 _ASCII = str.maketrans(
     {
@@ -89,18 +92,15 @@ def on_point(cells: Sequence[str]) -> list[str]:
     >>> on_point(["1.76", "37.4", "120", "none"])
     ['  1.76', ' 37.4 ', '120   ', '  none']
     """
-    heads = [cell.partition(".")[0] if _numeric(cell) else "" for cell in cells]
-    tails = [cell[len(head) :] if _numeric(cell) else "" for cell, head in zip(cells, heads, strict=True)]
+    split = [_NUMERIC.fullmatch(cell) for cell in cells]
+    heads = [found[1] if found else "" for found in split]
+    tails = [found[2] if found else "" for found in split]
     left, right = max(map(len, heads), default=0), max(map(len, tails), default=0)
     width = max([left + right, *map(len, cells)])
     return [
         (head.rjust(left) + tail.ljust(right)).rjust(width) if head else cell.rjust(width)
         for cell, head, tail in zip(cells, heads, tails, strict=True)
     ]
-
-
-def _numeric(cell: str) -> bool:
-    return bool(cell) and (cell[0].isdigit() or (cell[0] in "−-" and len(cell) > 1 and cell[1].isdigit()))
 
 
 def table(
@@ -119,10 +119,14 @@ def table(
     out = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), header_style="bold", show_edge=False)
     padded = []
     for i, (header, cells) in enumerate(columns):
-        safe = [clean(cell, console) for cell in cells]
-        padded.append(safe if i in flush else on_point(safe))
-        justify: Any = "left" if i in flush else "right"
-        out.add_column(Text(clean(header, console)), justify=justify, no_wrap=i not in wrapping, overflow="fold")
+        head, body = clean(header, console), [clean(cell, console) for cell in cells]
+        if i not in flush:
+            # Padded here and set to the left: set to the right, rich would drop the blanks behind the numbers.
+            body = on_point(body)
+            width = max([len(head), *map(len, body)])
+            head, body = head.rjust(width), [cell.rjust(width) for cell in body]
+        padded.append(body)
+        out.add_column(Text(head), no_wrap=i not in wrapping, overflow="fold")
     for row in zip(*padded, strict=True):
         out.add_row(*(Text(cell) for cell in row))
     return Group(Text(clean(title, console), style="bold"), out) if title else out

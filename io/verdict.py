@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 
@@ -12,6 +11,7 @@ from modesieve.io.wording import format_frequency, format_number, format_quantit
 from modesieve.reduce.comparison.records import Check, Comparison, TimeResponse
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.response.records import ErrorFigure
+from modesieve.reduce.truncation.guarantee import Guarantee
 from modesieve.reduce.truncation.records import ReducedModel, Tolerance
 
 #: Where people can be hurt a model is not the last word.
@@ -65,9 +65,8 @@ def leading(check: Check) -> ErrorFigure:
 
     Guaranteed where the small model carries a guarantee, else as the comparison has it.
     """
-    choice, guarantee = check.small.choice, check.small.guarantee
+    choice, source = check.small.choice, proof(check.small)
     of = choice.of if isinstance(choice, Tolerance) else "local"
-    source: Any = guarantee if guarantee is not None and guarantee.holds else None
     if of == "absolute" and check.absolute:
         figures = (source.absolute if source is not None else ()) or check.absolute
         fitting = [figure for figure in figures if figure.unit == choice.unit] or list(figures)
@@ -75,6 +74,11 @@ def leading(check: Check) -> ErrorFigure:
     measured = check.peak_error if of == "peak" else check.local_error
     proved = None if source is None else source.peak if of == "peak" else source.local
     return measured if proved is None else proved
+
+
+def proof(small: ReducedModel) -> Guarantee | None:
+    """The guarantee of ``small`` where it holds."""
+    return small.guarantee if small.guarantee is not None and small.guarantee.holds else None
 
 
 def kept_words(small: ReducedModel) -> str:
@@ -139,7 +143,8 @@ def _lines(comparison: Comparison, check: Check) -> tuple[Line, ...]:
     index = next((i for i, one in enumerate(comparison.checks) if one is check), 0)
     steps = step_errors(comparison.step, index) if _steps_tell(comparison, check) else None
     peaks = (np.abs(comparison.full.G) * comparison.modes.origin.amplitudes).sum(axis=2).max(axis=0, initial=0.0)
-    outputs = comparison.modes.origin.outputs
+    outputs, source = comparison.modes.origin.outputs, proof(check.small)
+    figures = source.absolute if source is not None and source.absolute else check.absolute
     return tuple(
         Line(
             output=output.name,
@@ -149,7 +154,7 @@ def _lines(comparison: Comparison, check: Check) -> tuple[Line, ...]:
             step="" if steps is None else format_quantity(float(steps[k]), output.unit),
             step_certainty="" if steps is None or comparison.step is None else comparison.step.certainty,
         )
-        for k, (output, figure) in enumerate(zip(outputs, check.absolute, strict=True))
+        for k, (output, figure) in enumerate(zip(outputs, figures, strict=True))
     )
 
 
@@ -174,7 +179,7 @@ def step_errors(step: TimeResponse | None, index: int) -> np.ndarray[tuple[int],
 def cautions(comparison: Comparison, check: Check) -> list[str]:
     """What a reader must know before using the small model."""
     figure, small, modes = leading(check), check.small, comparison.modes
-    out = [*_estimate_only(figure), *_certificate(modes), *_reach(modes, comparison.band)]
+    out = [*_estimate_only(figure), *_certificate(modes), *_reach(modes, comparison.band), *_no_proof(small)]
     out += [*_local(check, figure), *_phase(check)]
     out += [f"{text}" for text in (*modes.warnings, *comparison.warnings)]
     out += [note for note in small.notes if "pseudo-modes lie inside" in note]
@@ -186,6 +191,13 @@ def _estimate_only(figure: ErrorFigure) -> list[str]:
     if figure.certainty != "estimated":
         return []
     return ["the error is only estimated: nothing bounds it, and it was not measured against the full model"]
+
+
+def _no_proof(small: ReducedModel) -> list[str]:
+    guarantee = small.guarantee
+    if guarantee is None or guarantee.holds:
+        return []
+    return [f"nothing is guaranteed: {guarantee.reason}"]
 
 
 def _certificate(modes: Modes) -> list[str]:
