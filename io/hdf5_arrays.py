@@ -69,8 +69,6 @@ def array(source: Source, node: Node, place: str = "") -> Array:
             where=where,
             remedy="write the file with gzip or without compression",
         )
-    if dtype.kind == "O":
-        source.heap.check(where)
     shape = tuple(int(s) for s in shape)
     out = Array(
         source=source,
@@ -79,9 +77,13 @@ def array(source: Source, node: Node, place: str = "") -> Array:
         shape=shape,
         dtype=dtype,
         content=content_of(dtype, where),
-        rows=_rows(shape, chunks, dtype.itemsize) if dtype.kind != "O" else _text_rows(source),
+        rows=_rows(shape, chunks, dtype.itemsize),
     )
     _check_storage(out, chunks, stored)
+    if dtype.kind == "O" and out.size:
+        with reading(where):
+            total = source.heap.check_dataset(node, where)
+        source.budget.take(total, where)
     return out
 
 
@@ -131,7 +133,6 @@ def read_texts(data: Array, limit: int) -> tuple[str, ...]:
     out: list[str] = []
     for _, piece in data.pieces():
         out += [decoded(v, data.where) for v in piece]
-        data.source.budget.take(sum(len(v) for v in out[-len(piece) :]), data.where)
     return tuple(out)
 
 
@@ -160,11 +161,6 @@ def _rows(shape: tuple[int, ...], chunks: tuple[int, ...] | None, itemsize: int)
     if chunks:
         wanted = max(wanted // chunks[0], 1) * chunks[0]
     return int(min(wanted, shape[0]))
-
-
-def _text_rows(source: Source) -> int:
-    # Many texts of variable length may share one long one: few at a time bounds what a small file can ask for.
-    return min(max(FREE_BYTES // max(source.budget.file_size, 1), 16), 4096)
 
 
 def _check_storage(data: Array, chunks: tuple[int, ...] | None, stored: int) -> None:

@@ -1,24 +1,33 @@
-"""Texts of variable length lie in heaps inside an HDF5 file; the library walks a damaged heap forever.
+"""Texts of variable length lie in heaps inside an HDF5 file, and the library trusts what the file says of them.
 
-So the heaps are checked here first, from the file format specification (HDF5 File Format Specification 3.0, III.E,
-"Disk Format: Level 1E - Global Heap"): every object must be at least as long as its header and lie inside its heap.
+A damaged heap is walked forever, and a reference of four bytes' length makes the library clear four gigabytes. So heaps
+and references are checked here first, by the HDF5 File Format Specification 3.0: III.E "Global Heap" and IV.A.2
+"Datatype" (a variable-length text of one-byte characters), "Dataspace" and "Attribute" messages.
 """
 
 from __future__ import annotations
 
 import mmap
 import re
+from collections.abc import Iterator
+from typing import Any
+
+import h5py
+import numpy as np
 
 from modesieve.reduce.errors import FileError
 
-_START = re.compile(rb"GCOL\x01\0\0\0")
-#: Files up to this size are searched whole, larger ones at both ends, where writers put what is not bulk data.
+_HEAP = re.compile(rb"GCOL\x01\0\0\0")
+#: Inside the type of such a text: its size, and its one-byte characters. The bytes before tell class and purpose.
+_TEXT = re.compile(rb"\x10\0\0\0[\x10\x20\x30\x40\x50].{3}\x01\0\0\0.{4}", re.DOTALL)
+_REFERENCE = 16  # length (4), heap address (8), index (4)
 _OFFSETS = (0, *(512 << i for i in range(20)))  # where the file's signature may stand
+#: Files up to this size are searched whole, larger ones at both ends, where writers put what is not bulk data.
 _WHOLE, _ENDS = 256 << 20, 64 << 20
 
 
 class Heap:
-    """The text heaps of one file, checked when a text is about to be read, once."""
+    """The text heaps of one file, checked once, when a text is about to be read."""
 
     def __init__(self, path: str, size: int) -> None:
         self.path = path
@@ -26,15 +35,27 @@ class Heap:
         self.checked = False
 
     def check(self, where: str) -> None:
-        """Raise FileError if a heap of the file would trap its reader."""
-        if self.checked or self.size == 0:
+        """Raise FileError if a heap or an attribute's reference to one would trap its reader."""
+        if self.checked:
             return
         with open(self.path, "rb") as handle, mmap.mmap(handle.fileno(), 0, access=mmap.ACCESS_READ) as content:
             if _length_size(content) != 8:
                 raise _damaged(where)
-            for start in _starts(content):
-                _check_heap(content, start, where)
+            for low, high in _spans(len(content)):
+                for found in _HEAP.finditer(content, low, high):
+                    _check_heap(content, found.start(), where)
+                for found in _TEXT.finditer(content, max(low, 4), high):
+                    _check_attribute(content, found.start(), found.end(), where)
         self.checked = True
+
+    def check_dataset(self, node: Any, where: str) -> int:
+        """The same for the texts of a dataset, whose references must stand openly in the file; their total length."""
+        self.check(where)
+        total = 0
+        with open(self.path, "rb") as handle, mmap.mmap(handle.fileno(), 0, access=mmap.ACCESS_READ) as content:
+            for start, count in _extents(node, where):
+                total += _check_references(content, start, count, where)
+        return total
 
 
 def _length_size(content: mmap.mmap) -> int:
@@ -43,9 +64,8 @@ def _length_size(content: mmap.mmap) -> int:
     return content[at + (14 if content[at + 8] < 2 else 10)] if len(content) > at + 16 else 0
 
 
-def _starts(content: mmap.mmap) -> list[int]:
-    spans = [(0, len(content))] if len(content) <= _WHOLE else [(0, _ENDS), (len(content) - _ENDS, len(content))]
-    return [found.start() for low, high in spans for found in _START.finditer(content, low, high)]
+def _spans(size: int) -> list[tuple[int, int]]:
+    return [(0, size)] if size <= _WHOLE else [(0, _ENDS), (size - _ENDS, size)]
 
 
 def _check_heap(content: mmap.mmap, start: int, where: str) -> None:
@@ -61,6 +81,49 @@ def _check_heap(content: mmap.mmap, start: int, where: str) -> None:
         if step < 16 or at + step > end:
             raise _damaged(where)
         at += step
+
+
+def _check_attribute(content: mmap.mmap, start: int, end: int, where: str) -> None:
+    """Check the references behind a text type in an attribute: data space, then one reference for each element."""
+    if content[start - 4] & 15 != 9 or content[start - 3] & 15 != 1 or end + 24 > len(content):
+        return  # not a text of variable length
+    at = end if content[end] in (1, 2) else end + 4  # the first version of attributes pads to 8 bytes
+    version, rank, flags = content[at : at + 3]
+    if version not in (1, 2) or rank > 32:
+        return  # a dataset's type, with something else behind it
+    dims, count = at + (8 if version == 1 else 4), 1
+    for i in range(rank):
+        count *= int.from_bytes(content[dims + 8 * i : dims + 8 * i + 8], "little")
+    more = (flags & 1) + (flags >> 1 & 1 if version == 1 else 0)  # largest sizes, permutations
+    _check_references(content, dims + 8 * rank * (1 + more), count, where)
+
+
+def _extents(node: Any, where: str) -> Iterator[tuple[int, int]]:
+    """(start, number of references) of every stretch of a text dataset."""
+    plist, identity = node.id.get_create_plist(), node.id
+    if plist.get_layout() == h5py.h5d.CONTIGUOUS:
+        yield identity.get_offset(), node.size
+    elif plist.get_layout() == h5py.h5d.CHUNKED and plist.get_nfilters() == 0:
+        for i in range(identity.get_num_chunks()):
+            info = identity.get_chunk_info(i)
+            yield info.byte_offset, info.size // _REFERENCE
+    else:
+        raise FileError(
+            "texts of variable length are stored in a way that is not read here",
+            expected="texts without compression, or texts of fixed length",
+            where=where,
+            remedy="store the texts without compression",
+        )
+
+
+def _check_references(content: mmap.mmap, start: int | None, count: int, where: str) -> int:
+    """Refuse a text that is longer than the file it lies in; returns the total length (texts may share their bytes)."""
+    if start is None or start + _REFERENCE * count > len(content):
+        raise _damaged(where)
+    lengths = np.frombuffer(content[start : start + _REFERENCE * count], dtype="<u4")[:: _REFERENCE // 4]
+    if lengths.size and lengths.max() > len(content):
+        raise _damaged(where)
+    return int(lengths.sum(dtype=np.int64))
 
 
 def _damaged(where: str) -> FileError:
