@@ -1,8 +1,9 @@
 """Rules of practice on effective modal mass, and what they keep.
 
 Fractions of a base-excited uniform cantilever: 0.61308, 0.18830, 0.06473, 0.03309, 0.02001 (textbook values, e.g.
-Clough and Penzien, Dynamics of Structures; Wijker, Mechanical Vibrations in Spacecraft Design, 2004; from memory, recomputed
-with mpmath: 0.61307609, 0.18830036, 0.064732232, 0.03308689, 0.020013999). A clamped-free rod has 8/((2n - 1) pi)^2.
+Clough and Penzien, Dynamics of Structures; Wijker, Mechanical Vibrations in Spacecraft Design, 2004; from memory,
+recomputed with mpmath: 0.61307609, 0.18830036, 0.064732232, 0.03308689, 0.020013999). A clamped-free rod has
+8/((2n - 1) pi)^2.
 """
 
 from __future__ import annotations
