@@ -212,7 +212,7 @@ class FirstOrderModal:
         """``G(j w)``, shape (w, p, m); not finite where an undamped pole sits exactly on a frequency."""
         single = np.array([len(a) == 1 for a in self.blocks], dtype=bool)
         rows = self.offsets[:-1][single]
-        G = np.broadcast_to(self.feedthrough.astype(complex), (len(omega), *self.D.shape)).copy()
+        G: Complex = np.array(np.broadcast_to(self.feedthrough, (len(omega), *self.D.shape)), dtype=np.complex128)
         if rows.size:
             lam = np.array([self.blocks[i][0, 0] for i in np.flatnonzero(single)])
             gain = 1.0 / (1j * np.asarray(omega, dtype=float)[:, None] - lam)
