@@ -217,8 +217,8 @@ class FirstOrderModal:
             lam = np.array([self.blocks[i][0, 0] for i in np.flatnonzero(single)])
             gain = 1.0 / (1j * np.asarray(omega, dtype=float)[:, None] - lam)
             G += (self.C[:, rows] * gain[:, None, :]) @ self.B[rows]
-        for term in np.flatnonzero(~single):
-            G += self.C[:, self.states_of(term)] @ self.resolvent(omega, int(term))
+        for term in (int(i) for i in np.flatnonzero(~single)):
+            G += self.C[:, self.states_of(term)] @ self.resolvent(omega, term)
         return G
 
     def select(self, keep: Ints) -> FirstOrderModal:
