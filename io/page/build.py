@@ -15,10 +15,12 @@ from modesieve.io.page.payload import (
     check_data,
     encode,
     figure_data,
+    hub_data,
     mode_rows,
     number,
     packed,
     shape_data,
+    spot_data,
     system_data,
     term_statics,
     time_data,
@@ -63,7 +65,7 @@ def page_text(comparison: Comparison, ranking: Ranking, words: Words, *, index: 
     )
 
 
-SCRIPTS = ("numbers", "trial", "charts", "shapes", "page")
+SCRIPTS = ("numbers", "tails", "trial", "charts", "shapes", "page")
 
 
 def _plotly() -> str:
@@ -107,6 +109,8 @@ def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Wor
         "sweep": None if comparison.sweep is None else sweep_data(comparison.sweep),
         "step": time_data(comparison.step),
         "shapes": shape_data(modes),
+        "hub": hub_data(small, full.omega),
+        "spot_checks": spot_data(small),
         "error": figure_data(small.error),
         "verdict": {
             "headline": words.headline,

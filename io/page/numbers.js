@@ -189,6 +189,8 @@ const Numbers = (() => {
       H[a][k] = [c * u[0] - s * v[0], c * u[1] - s * v[1]];
       H[b][k] = [s * u[0] + c * v[0], s * u[1] + c * v[1]];
     }
+    // What rounding leaves would no longer be Hermitian, and would be rotated for ever.
+    H[a][b] = [0, 0]; H[b][a] = [0, 0]; H[a][a][1] = 0; H[b][b][1] = 0;
   }
 
   // Unit-step response of term i for one pair at the times t, added to acc.

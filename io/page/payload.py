@@ -12,9 +12,19 @@ import numpy as np
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.comparison.records import Check, TimeResponse
 from modesieve.reduce.modal.records import Modes, Ranking
-from modesieve.reduce.model import Structure, Unknowns
+from modesieve.reduce.model import (
+    BaseDamping,
+    LossFactor,
+    ModalRatio,
+    RatioByFrequency,
+    RatioByMode,
+    Rayleigh,
+    Structure,
+    Unknowns,
+)
 from modesieve.reduce.response.records import ErrorFigure
 from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal, SmallSystem
+from modesieve.reduce.truncation.records import ReducedModel
 
 #: Mode shapes are left out of the page past this many numbers (4 bytes each before encoding).
 SHAPE_LIMIT = 600_000
@@ -55,6 +65,54 @@ def system_data(system: SmallSystem) -> dict[str, Any]:
         "direct": None if system.direct is None else packed(system.direct),
         **common,
     }
+
+
+def hub_data(small: ReducedModel, omega: Real) -> dict[str, Any] | None:
+    """The reference model of the guarantee, its own bound at the stored frequencies, and the rule of pseudo-modes.
+
+    None where the small model carries no guarantee that holds.
+    """
+    hub, guarantee = small.hub, small.guarantee
+    if hub is None or guarantee is None or not guarantee.holds:
+        return None
+    terms = hub.terms
+    arrays = {name: packed(getattr(terms, name)) for name in ("x", "b", "cq", "cv", "ca", "d", "eta")}
+    weighted, entries = hub.bound(omega)
+    return {
+        "order": terms.order,
+        "terms": terms.terms,
+        "computed": hub.computed,
+        "p": hub.system.p,
+        "m": hub.system.m,
+        "levels": small.levels if small.statics == "vectors" else 0,
+        "rule": _rule(hub.damping),
+        "error": packed(weighted),
+        "pair_error": packed(hub.weigh(entries)),
+        **arrays,
+    }
+
+
+def _rule(base: BaseDamping) -> dict[str, Any]:
+    """The base damping as numbers, see `rest.pseudo_damping`."""
+    match base:
+        case ModalRatio(ratio=ratio):
+            return {"omega": [0.0], "ratio": [ratio]}
+        case RatioByFrequency(omega=omega, ratio=ratios):
+            return {"omega": omega.tolist(), "ratio": ratios.tolist()}
+        case RatioByMode(ratio=ratios):
+            return {"omega": [0.0], "ratio": [float(ratios[-1])]}
+        case Rayleigh(alpha=alpha, beta=beta):
+            return {"alpha": alpha, "beta": beta}
+        case LossFactor(eta=eta):
+            return {"eta": eta}
+    return {}
+
+
+def spot_data(small: ReducedModel) -> list[dict[str, float]]:
+    """Places, true errors and upper bounds of the spot checks, weighted."""
+    if small.guarantee is None:
+        return []
+    return [{"omega": s.omega, "error": s.error, "bound": s.high} for s in small.guarantee.spot_checks]
 
 
 def term_statics(system: SmallSystem) -> Real:

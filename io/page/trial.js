@@ -1,11 +1,11 @@
 "use strict";
 // What is kept, and what follows from it: the small model's response, its error and its verdict. No drawing here.
 
-const Trial = ((N) => {
+const Trial = ((N, T) => {
   function create(data) {
     const full = N.complex(data.full), omega = N.array(data.omega), { p, m } = data.system, pairs = p * m;
     const scale = N.array(data.scale), system = N.decode(data.system), threshold = data.threshold;
-    const tail = data.tail ? N.decode(data.tail) : null, hub = data.hub ? hubOf(data.hub) : null;
+    const hub = data.hub ? hubOf(data.hub) : null, levels = data.hub ? data.hub.levels : 0;
     const D = N.array(data.system.D), X = data.system.X ? N.array(data.system.X) : new Float64Array(pairs);
     const statics = data.statics_matrix ? N.array(data.statics_matrix) : null, dc = N.array(data.term_statics);
     const sigmaFull = N.largestSingular(full, scale, omega.length, p, m);
@@ -14,9 +14,18 @@ const Trial = ((N) => {
     const termOf = new Map(data.modes.map((r) => [r.number, r.term]));
     let kept = new Set(data.delivered.kept);
 
+    let tail = null;
+
     function hubOf(stored) {
-      return { system: N.decode(stored.tail), X: stored.X ? N.array(stored.X) : null,
-        error: N.array(stored.error), pairError: N.array(stored.pair_error), note: stored.note };
+      const terms = T.decode(stored), past = Array.from({ length: terms.k - stored.computed }, (_, i) => i + stored.computed);
+      return { terms, tail: past, error: N.array(stored.error), pairError: N.array(stored.pair_error), system: asSystem(terms) };
+    }
+
+    // A list of real terms in the form that numbers.js evaluates.
+    function asSystem(t) {
+      if (t.order === 2) return { form: "second order", ...t };
+      const index = Array.from({ length: t.k }, (_, i) => i);
+      return { form: "first order", p: t.p, m: t.m, k: t.k, states: t.k, sizes: index.map(() => 1), first: index, firstBlock: index, blocks: t.x.map((v) => -v), B: t.b, C: t.cq, direct: null };
     }
 
     // Always-kept modes and the rest of a block come along.
@@ -24,6 +33,9 @@ const Trial = ((N) => {
       const terms = new Set([...numbers, ...always].map((n) => termOf.get(n)));
       return new Set(data.modes.filter((r) => terms.has(r.term)).map((r) => r.number));
     }
+
+    // With tail levels, everything that is not kept answers statically through pseudo-modes.
+    function retail() { tail = levels ? T.pseudoModes(hub.terms, new Set(keptTerms()), levels) : null; }
 
     const keptTerms = () => [...new Set([...kept].map((n) => termOf.get(n)))].sort((a, b) => a - b);
 
@@ -50,9 +62,8 @@ const Trial = ((N) => {
     function guaranteed(R) {
       if (!hub) return null;
       const H = N.zeros(full.re.length);
-      for (let i = 0; i < system.k; i++) N.addTerm(H, system, i, omega, 1);
-      for (let i = 0; i < hub.system.k; i++) N.addTerm(H, hub.system, i, omega, 1);
-      N.addThrough(H, D, hub.X || new Float64Array(pairs), data.eta_rest, omega);
+      for (let i = 0; i < hub.terms.k; i++) N.addTerm(H, hub.system, i, omega, 1);
+      N.addThrough(H, D, X, data.eta_rest, omega);
       const gap = minus(H, R), sigma = N.largestSingular(gap, scale, omega.length, p, m);
       const perPair = new Float64Array(full.re.length);
       for (let i = 0; i < perPair.length; i++) {
@@ -107,14 +118,15 @@ const Trial = ((N) => {
       return y.map((v) => (v + D[e] + X[e]) * scaled);
     }
 
+    retail();
     return {
       omega, full, sigmaFull, p, m, always, evaluate, step, complete, peak,
       kept: () => kept,
-      set: (numbers) => { kept = complete(numbers); },
+      set: (numbers) => { kept = complete(numbers); retail(); },
       isDelivered: () => kept.size === data.delivered.kept.length && data.delivered.kept.every((n) => kept.has(n)),
     };
   }
   return { create };
-})(typeof Numbers !== "undefined" ? Numbers : require("./numbers.js"));
+})(typeof Numbers !== "undefined" ? Numbers : require("./numbers.js"), typeof Tails !== "undefined" ? Tails : require("./tails.js"));
 
 if (typeof module !== "undefined") module.exports = Trial;

@@ -84,6 +84,8 @@ def truncate(
         uniform=_uniform(modes, kept.numbers, make.statics),
         notes=(*_why_none(modes, statics), *make.notes(kept.numbers, around), *kept.notes, *measured.notes),
         ranking=table,
+        levels=make.levels,
+        hub=make.hub,
     )
 
 

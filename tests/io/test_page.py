@@ -32,7 +32,8 @@ from modesieve.reduce.model import (
     Thermal,
     Unknowns,
 )
-from modesieve.reduce.truncation.records import Count
+from modesieve.reduce.truncation.promise import with_guarantee
+from modesieve.reduce.truncation.records import Count, Keep, Statics
 from modesieve.reduce.truncation.truncate import truncate
 
 HOSTILE = "tip </script><script>window.hacked=1</script><img src=x onerror='window.hacked=1'><b>"
@@ -96,10 +97,11 @@ MODELS: dict[str, tuple[Model, tuple[float, float]]] = {
 }
 
 
-def compared(name: str) -> tuple[Comparison, Ranking]:
+def compared(name: str, statics: Statics | None = None) -> tuple[Comparison, Ranking]:
     model, band = MODELS[name]
     ranking = rank(find_modes(model, band), band=band)
-    small = truncate(ranking, Count(modes=max(2, len(ranking.modes) // 5)), band=band)
+    small = truncate(ranking, Count(modes=max(2, len(ranking.modes) // 5)), band=band, statics=statics)
+    small = with_guarantee(small)
     return compare(model, [small], modes=ranking.modes, band=band), ranking
 
 
@@ -145,29 +147,44 @@ def opened(browser: Any, tmp_path: Path) -> Iterator[Any]:
 
 
 @pytest.mark.browser
-@pytest.mark.parametrize("name", list(MODELS))
-def test_the_browser_computes_what_python_computes(opened: Any, name: str) -> None:
-    """For random kept sets the small model and its errors agree with Python to 1e-9 of the peak."""
-    comparison, ranking = compared(name)
+@pytest.mark.parametrize(
+    ("name", "statics"),
+    [(name, None) for name in MODELS] + [("structure", "none"), ("structure", "vectors"), ("thermal", "vectors")],
+)
+def test_the_browser_computes_what_python_computes(opened: Any, name: str, statics: Statics | None) -> None:
+    """For random kept sets the small model, its error and its guaranteed curve agree with Python to 1e-9."""
+    comparison, ranking = compared(name, statics)
+    delivered = comparison.checks[0].small
     page = opened(comparison, ranking)
     rng = np.random.default_rng(8)
     modes, model = ranking.modes, comparison.model
     for _ in range(4):
         numbers = sorted(int(n) for n in rng.choice(modes.numbers, size=rng.integers(1, len(modes)), replace=False))
-        kept, re, im, sigma = page.evaluate(
+        kept, re, im, sigma, bound = page.evaluate(
             "(numbers) => { modesieve.keep(numbers); const r = modesieve.result();"
-            " return [modesieve.kept(), Array.from(r.R.re), Array.from(r.R.im), Array.from(r.sigma)]; }",
+            " return [modesieve.kept(), Array.from(r.R.re), Array.from(r.R.im), Array.from(r.sigma),"
+            " r.guaranteed && Array.from(r.guaranteed.sigma)]; }",
             numbers,
         )
-        from modesieve.reduce.truncation.records import Keep
-
-        small = truncate(ranking, Keep(numbers=tuple(numbers)), band=comparison.band, full=comparison.full)
+        small = truncate(
+            ranking,
+            Keep(numbers=tuple(numbers)),
+            band=comparison.band,
+            full=comparison.full,
+            statics=delivered.statics,
+            levels=delivered.levels or 2,
+        )
         assert sorted(kept) == sorted(small.kept)
         R = small.response(comparison.full.omega)
         peak = np.abs(R).max()
         np.testing.assert_allclose((np.array(re) + 1j * np.array(im)).reshape(R.shape), R, atol=1e-9 * peak)
         error = np.linalg.norm(model.weigh(comparison.full.G - R), ord=2, axis=(1, 2))
         np.testing.assert_allclose(sigma, error, atol=1e-9 * comparison.reference_peak)
+        if delivered.hub is not None and delivered.guarantee is not None and delivered.guarantee.holds:
+            omega = comparison.full.omega
+            gap = np.linalg.norm(model.weigh(delivered.hub.response(omega) - R), ord=2, axis=(1, 2))
+            expected = gap + delivered.hub.error(omega)
+            np.testing.assert_allclose(bound, expected, atol=1e-9 * comparison.reference_peak)
 
 
 @pytest.mark.browser
