@@ -55,7 +55,7 @@ def state_space_modes(
         vectors=(dynamic.right @ form.right)[:, : keep.states],
         left=(form.left @ dynamic.left).T[:, : keep.states],
         static=static_of(form, B, C, table),
-        warnings=(*warnings, *_block_warnings(table)),
+        warnings=(*warnings, *block_warnings(table)),
         solver="LAPACK, dense",
         seconds=time.perf_counter() - began,
     )
@@ -218,7 +218,7 @@ def _size(left: Real, right: Real, rounding: Real) -> float:
     return size if size > 1e4 * np.finfo(float).eps * spread else max(spread, 1e-300)
 
 
-def _block_warnings(table: Listing) -> list[str]:
+def block_warnings(table: Listing) -> list[str]:
     out: list[Any] = []
     for term in np.flatnonzero(table.sizes > 2):
         size = int(table.sizes[term])

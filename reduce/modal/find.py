@@ -49,6 +49,6 @@ def find_modes(
     if isinstance(model, Structure) and model.damping.is_local:
         from modesieve.reduce.modal.damped import damped_modes
 
-        return damped_modes(model, band, count=count, progress=progress)
+        return damped_modes(model, band, count=count, solver=solver, progress=progress)
     wanted = request(band, count, model.n)
     return symmetric_modes(model, wanted, solver=solver, seed=seed, progress=progress)
