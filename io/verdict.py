@@ -10,6 +10,7 @@ import numpy as np
 from modesieve.io.wording import format_frequency, format_number, format_quantity, format_ratio
 from modesieve.reduce.comparison.records import Check, Comparison, TimeResponse
 from modesieve.reduce.modal.records import Modes
+from modesieve.reduce.model import Structure
 from modesieve.reduce.response.records import ErrorFigure
 from modesieve.reduce.truncation.guarantee import Guarantee
 from modesieve.reduce.truncation.records import ReducedModel, Tolerance
@@ -49,7 +50,7 @@ class Verdict:
 
 def verdict_of(comparison: Comparison, check: Check) -> Verdict:
     """The verdict on one small model."""
-    figure = leading(check)
+    figure = leading(comparison, check)
     kept = kept_words(check.small)
     sentence = f"{kept}. {error_words(figure, comparison)}"
     return Verdict(
@@ -60,12 +61,12 @@ def verdict_of(comparison: Comparison, check: Check) -> Verdict:
     )
 
 
-def leading(check: Check) -> ErrorFigure:
+def leading(comparison: Comparison, check: Check) -> ErrorFigure:
     """The error that the choice asked for: of local unless a tolerance said peak or a size with a unit.
 
     Guaranteed where the small model carries a guarantee, else as the comparison has it.
     """
-    choice, source = check.small.choice, proof(check.small)
+    choice, source = check.small.choice, proof(comparison, check.small)
     of = choice.of if isinstance(choice, Tolerance) else "local"
     if of == "absolute" and check.absolute:
         figures = (source.absolute if source is not None else ()) or check.absolute
@@ -76,9 +77,22 @@ def leading(check: Check) -> ErrorFigure:
     return measured if proved is None else proved
 
 
-def proof(small: ReducedModel) -> Guarantee | None:
-    """The guarantee of ``small`` where it holds."""
-    return small.guarantee if small.guarantee is not None and small.guarantee.holds else None
+def proof(comparison: Comparison, small: ReducedModel) -> Guarantee | None:
+    """The guarantee of ``small`` where it holds for this comparison: same full model, and its band covers this one."""
+    guarantee = small.guarantee
+    if guarantee is None or not guarantee.holds or not _same_full_model(comparison.modes, small.modes):
+        return None
+    low, high = guarantee.band
+    inside = low <= comparison.band[0] * (1 + 1e-12) and comparison.band[1] <= high * (1 + 1e-12)
+    return guarantee if inside else None
+
+
+def _same_full_model(ours: Modes, theirs: Modes) -> bool:
+    # With modal damping the counted modes are part of what the full model is.
+    if ours.origin.fingerprint != theirs.origin.fingerprint:
+        return False
+    modal = isinstance(ours.model, Structure) and ours.model.damping.is_modal
+    return not modal or len(ours) == len(theirs)
 
 
 def kept_words(small: ReducedModel) -> str:
@@ -143,7 +157,7 @@ def _lines(comparison: Comparison, check: Check) -> tuple[Line, ...]:
     index = next((i for i, one in enumerate(comparison.checks) if one is check), 0)
     steps = step_errors(comparison.step, index) if _steps_tell(comparison, check) else None
     peaks = (np.abs(comparison.full.G) * comparison.modes.origin.amplitudes).sum(axis=2).max(axis=0, initial=0.0)
-    outputs, source = comparison.modes.origin.outputs, proof(check.small)
+    outputs, source = comparison.modes.origin.outputs, proof(comparison, check.small)
     figures = source.absolute if source is not None and source.absolute else check.absolute
     return tuple(
         Line(
@@ -178,8 +192,13 @@ def step_errors(step: TimeResponse | None, index: int) -> np.ndarray[tuple[int],
 
 def cautions(comparison: Comparison, check: Check) -> list[str]:
     """What a reader must know before using the small model."""
-    figure, small, modes = leading(check), check.small, comparison.modes
-    out = [*_estimate_only(figure), *_certificate(modes), *_reach(modes, comparison.band), *_no_proof(small)]
+    figure, small, modes = leading(comparison, check), check.small, comparison.modes
+    out = [
+        *_estimate_only(figure),
+        *_certificate(modes),
+        *_reach(modes, comparison.band),
+        *_no_proof(comparison, small),
+    ]
     out += [*_local(check, figure), *_phase(check)]
     out += [f"{text}" for text in (*modes.warnings, *comparison.warnings)]
     out += [note for note in small.notes if "pseudo-modes lie inside" in note]
@@ -193,11 +212,16 @@ def _estimate_only(figure: ErrorFigure) -> list[str]:
     return ["the error is only estimated: nothing bounds it, and it was not measured against the full model"]
 
 
-def _no_proof(small: ReducedModel) -> list[str]:
-    guarantee = small.guarantee
-    if guarantee is None or guarantee.holds:
+def _no_proof(comparison: Comparison, small: ReducedModel) -> list[str]:
+    guarantee, kind = small.guarantee, comparison.modes.origin.kind
+    if guarantee is None or proof(comparison, small) is not None:
         return []
-    return [f"nothing is guaranteed: {guarantee.reason}"]
+    if not guarantee.holds:
+        return [f"nothing is guaranteed: {guarantee.reason}"]
+    if not _same_full_model(comparison.modes, small.modes):
+        return ["the small model's guarantee is for another full model, and is left aside here"]
+    low, high = (band_end(w, kind) for w in guarantee.band)
+    return [f"the small model's guarantee covers {low} to {high} only, and is left aside here"]
 
 
 def _certificate(modes: Modes) -> list[str]:

@@ -30,6 +30,7 @@ from modesieve.reduce.modal.rank import MEASURES, rank, unknown_measure
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.model import Model
 from modesieve.reduce.progress import Listener
+from modesieve.reduce.truncation.promise import with_guarantee
 from modesieve.reduce.truncation.records import Above, Band, Choice, Count, Keep
 from modesieve.reduce.truncation.truncate import truncate as cut
 
@@ -80,6 +81,7 @@ def truncate(
     with ProgressDisplay() as progress:
         found = _modes(model, modes_file, choice, around, progress)
         small = cut(_ranked(found, choice, by, around), choice, statics=statics, band=around, progress=progress)
+        small = with_guarantee(small, progress)
     save(output, small)
     if as_json:
         click.echo(dumps(reduced_object(small) | {"file": str(output)}), nl=False)

@@ -65,7 +65,7 @@ def caption_text(comparison: Comparison) -> str:
     """Model, kept count, statics, band and error, for the line under every plate."""
     origin, check = comparison.modes.origin, comparison.checks[0]
     low, high = (band_end(w, origin.kind) for w in comparison.band)
-    figure = leading(check)
+    figure = leading(comparison, check)
     size = (
         f"error {figure_size(figure)} of {figure.relative_to}"
         if figure.relative_to != "absolute"

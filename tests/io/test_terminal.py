@@ -225,11 +225,26 @@ def test_cautions_follow_what_is_known(result):
 
 def test_the_leading_figure_is_the_one_asked_for(result):
     """A tolerance of peak leads with the peak error, an absolute one with the worst output."""
-    check = result.comparison.checks[0]
+    comparison, check = result.comparison, unproved(result)
     of_peak = replace(check.small, choice=Tolerance(value=0.1, of="peak"))
-    assert leading(replace(check, small=of_peak)).relative_to == "peak"
+    assert leading(comparison, replace(check, small=of_peak)).relative_to == "peak"
     absolute = replace(check.small, choice=Tolerance(value=0.1, of="absolute", unit="m"))
-    assert leading(replace(check, small=absolute)).unit == "m"
+    assert leading(comparison, replace(check, small=absolute)).unit == "m"
+
+
+def test_guarantees_speak_only_for_their_own_band_and_model(result):
+    """Beyond its band, or for another full model, the measured figure leads and a caution says why."""
+    comparison, check = result.comparison, result.comparison.checks[0]
+    assert leading(comparison, check).certainty == "guaranteed"
+    wide = replace(comparison, band=(0.0, 6 * HZ))
+    assert leading(wide, check).certainty == "measured"
+    assert any("covers 0 Hz to 4 Hz only" in text for text in cautions(wide, check))
+    narrow = replace(comparison, band=(1 * HZ, 2 * HZ))
+    assert leading(narrow, check).certainty == "guaranteed"
+    origin = replace(comparison.modes.origin, fingerprint="0" * 64)
+    other = replace(comparison, modes=replace(comparison.modes, origin=origin))
+    assert leading(other, check).certainty == "measured"
+    assert any("another full model" in text for text in cautions(other, check))
 
 
 # ---- JSON ------------------------------------------------------------------------------------------------------------
