@@ -9,7 +9,7 @@ from typing import Any, Literal
 import h5py
 import numpy as np
 
-from modesieve.io.hdf5 import FREE_BYTES, Node, Source, content_of, decoded, reading
+from modesieve.io.hdf5 import Node, Source, content_of, decoded, reading
 from modesieve.reduce.errors import FileError
 
 _PIECE_BYTES = 4 << 20

@@ -55,7 +55,8 @@ def read_modes_file(source: Source, model: Model | None = None) -> Modes:
     check_format(source, FORMAT, VERSION)
     shapes = {name: _shapes_in(source, name) for name in ("vectors", "left")}
     modes = read_modes(source, source.file, model=model, **shapes)
-    check_shapes(modes, {"vectors": "nk", "left": "nk"}, source.path, n=modes.origin.n, k=len(modes))
+    # One column a mode, or one a state where modes are kept as real blocks.
+    check_shapes(modes, {"vectors": "nv", "left": "nv"}, source.path, n=modes.origin.n)
     return modes
 
 

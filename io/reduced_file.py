@@ -14,6 +14,7 @@ from __future__ import annotations
 
 from typing import Any
 
+import h5py
 import numpy as np
 import scipy.sparse as sp
 
@@ -35,6 +36,9 @@ from modesieve.reduce.truncation.records import ReducedModel
 FORMAT, VERSION = "modesieve reduced model", 1
 _ELSEWHERE = ("modes", "kept", "system", "statics", "samples", "ranking")
 _STATICS = ("none", "feedthrough", "vectors")
+_HUB = {"load_rest": "rm", "output_rest": "3rp", "tail_rest": "rt", "amplitudes": "m", "resolutions": "p"}
+_HUB |= {"direct": "pm", "massless": "pm"}
+_GUARANTEE = {"omega": "w", "difference": "w", "hub_error": "w", "reference": "w", "pair_peak": "pm"}
 _SAMPLES = {"omega": "w", "G": "wpm", "backward_error": "w", "residual": "w", "method": "w"}
 
 
@@ -52,7 +56,7 @@ def read_reduced_file(source: Source) -> ReducedModel:
     check_format(source, FORMAT, VERSION)
     file = source.file
     modes = read_modes(source, file)
-    return read_record(
+    small = read_record(
         source,
         group(source, file, "result"),
         ReducedModel,
@@ -63,6 +67,8 @@ def read_reduced_file(source: Source) -> ReducedModel:
         samples=_samples(source, file, modes),
         ranking=_ranking(source, file, modes),
     )
+    _check_grounds(small, source.at("/result"))
+    return small
 
 
 def write_reduced(file: Node, small: ReducedModel) -> None:
@@ -79,6 +85,8 @@ def write_reduced(file: Node, small: ReducedModel) -> None:
     if small.samples is not None:
         write_record(file.create_group("samples"), small.samples)
     write_record(file.create_group("result"), small, without=_ELSEWHERE)
+    if small.guarantee is not None and small.guarantee.spot_checks:
+        file["spot_checks"] = h5py.SoftLink("/result/guarantee/spot_checks")
     write_seal(file)
 
 
@@ -121,6 +129,16 @@ def _state_space(system: SmallSystem) -> tuple[Any, Any, Any, Any]:
         return A, B, C, D
     # Nothing but feedthrough is left: a model needs a state, so it gets one that nothing moves.
     return -np.eye(1), np.zeros((1, system.m)), np.zeros((system.p, 1)), D
+
+
+def _check_grounds(small: ReducedModel, where: str) -> None:
+    """Hold the hub's and the guarantee's arrays against the channels."""
+    p, m = small.modes.origin.p, small.modes.origin.m
+    if small.hub is not None:
+        check_system(small.hub.system, f"{where}/hub/system", p, m)
+        check_shapes(small.hub, _HUB, f"{where}/hub", p=p, m=m, t=small.hub.system.terms - small.hub.computed)
+    if small.guarantee is not None:
+        check_shapes(small.guarantee, _GUARANTEE, f"{where}/guarantee", p=p, m=m)
 
 
 def _kept(source: Source, file: Node, modes: Modes) -> tuple[int, ...]:
