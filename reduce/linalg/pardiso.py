@@ -8,6 +8,7 @@ from __future__ import annotations
 import ctypes
 import sys
 from functools import cache
+from importlib.metadata import PackageNotFoundError, distribution, version
 from typing import Any
 
 import numpy as np
@@ -42,15 +43,32 @@ MEANING = {
 @cache
 def _pardiso() -> Any:
     """The library's routine, None where it cannot be loaded."""
-    try:
-        from pypardiso import PyPardisoSolver
-
-        routine = PyPardisoSolver().libmkl["pardiso"]  # by item: an own object with own argument types
-    except (ImportError, OSError, AttributeError):
+    library = _from_wheel() or _from_pypardiso()
+    if library is None:
         return None
+    routine = library["pardiso"]  # by item: an own object with own argument types
     routine.argtypes = [ctypes.c_void_p] * 16
     routine.restype = None
     return routine
+
+
+def _from_wheel() -> Any:
+    """MKL from the files of its installed package: pypardiso walks the whole Python installation for it (a second)."""
+    try:
+        version("pypardiso")
+        found = [f for f in distribution("mkl").files or () if f.name.startswith(("libmkl_rt.so", "mkl_rt."))]
+        return ctypes.CDLL(str(found[0].locate())) if found else None
+    except (PackageNotFoundError, OSError):
+        return None
+
+
+def _from_pypardiso() -> Any:
+    try:
+        from pypardiso import PyPardisoSolver
+
+        return PyPardisoSolver().libmkl
+    except (ImportError, OSError, AttributeError):
+        return None
 
 
 def pardiso_available() -> bool:

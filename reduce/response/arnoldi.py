@@ -204,7 +204,8 @@ def _padded(f: Any, m: int) -> Any:
 
 def _solve(Z: Complex, f: Any) -> Complex:
     try:
-        return np.linalg.solve(Z, np.broadcast_to(f.astype(complex), (len(Z), *f.shape)))
+        whole = np.linalg.solve(Z, np.broadcast_to(f.astype(complex), (len(Z), *f.shape)))
+        return np.asarray(whole, dtype=np.complex128)
     except np.linalg.LinAlgError:  # an undamped mode exactly on one of the frequencies: that one alone is nan
         out = np.full((len(Z), *f.shape), np.nan, dtype=complex)
         for i, z in enumerate(Z):

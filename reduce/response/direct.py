@@ -15,7 +15,8 @@ from modesieve.reduce.linalg.factor import SolverName, factorise
 from modesieve.reduce.linalg.shift import regular
 from modesieve.reduce.response.dynamic import Dynamic
 
-#: Singular to working precision: an answer this many times ``norm(F)/norm(Z)`` that leaves this relative residual.
+#: Singular to working precision: an answer larger than this many times ``norm(F)`` over the size of Z, which still
+#: leaves this relative residual.
 BLOWN_UP, LEFT_OVER = 1e11, 1e-3
 
 
@@ -74,7 +75,7 @@ def _is_answer(dynamic: Dynamic, omega: float, X: Complex, relative: float) -> b
     x, f = np.linalg.norm(X, axis=0), np.linalg.norm(dynamic.F, axis=0)
     if not np.all(np.isfinite(x)):
         return False
-    if relative > LEFT_OVER and np.any(dynamic.norm(omega) * x > BLOWN_UP * f):
+    if relative > LEFT_OVER and np.any(dynamic.size(omega) * x > BLOWN_UP * f):
         return False
     return omega != 0 or not dynamic.symmetric or _is_regular(dynamic)
 

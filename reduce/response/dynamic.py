@@ -96,8 +96,12 @@ class Dynamic:
         c = self.coefficients(omega)
         diagonal, rows = self._sizes
         entries = np.abs(sum(factor * d for factor, d in zip(c, diagonal, strict=True)))
-        weighted = np.sort(np.abs(c)[:, None] * rows, axis=0)
-        return float(max(entries.max(initial=0.0), (2 * weighted[-1] - weighted.sum(axis=0)).max(initial=0.0)))
+        weighted = np.abs(c)[:, None] * rows
+        return float(max(entries.max(initial=0.0), (2 * weighted.max(axis=0) - weighted.sum(axis=0)).max(initial=0.0)))
+
+    def size(self, omega: float) -> float:
+        """The size of the parts of Z(w) before they cancel."""
+        return float((np.abs(self.coefficients(omega)) @ self._sizes[1]).max(initial=0.0))
 
     @property
     def _sizes(self) -> tuple[list[Real], Real]:
@@ -114,8 +118,8 @@ def _squares(A: Any) -> Any:
 
 
 def times(A: Any, X: Any) -> Any:
-    """``A X`` for real A: real and imaginary part in one real product, which is twice as fast as a complex one."""
-    if not np.iscomplexobj(X):
+    """``A X``; real A and complex X as one real product, which is twice as fast as a complex one."""
+    if not np.iscomplexobj(X) or np.iscomplexobj(A):
         return A @ X
     k = X.shape[1]
     both = A @ np.concatenate([X.real, X.imag], axis=1)

@@ -17,9 +17,10 @@ from modesieve.reduce.linalg.factor import SolverName
 from modesieve.reduce.linalg.memory import free_bytes
 from modesieve.reduce.model import Model
 from modesieve.reduce.progress import Listener, tell
-from modesieve.reduce.response.arnoldi import KrylovResponse
-from modesieve.reduce.response.direct import errors, solve_at, worst
-from modesieve.reduce.response.dynamic import Dynamic, dynamic_of, times
+from modesieve.reduce.response.arnoldi import PIECE, KrylovResponse
+from modesieve.reduce.response.check import Images
+from modesieve.reduce.response.direct import errors, solve_at
+from modesieve.reduce.response.dynamic import Dynamic, dynamic_of
 from modesieve.reduce.response.forms import Form, form_of
 from modesieve.reduce.response.records import FullResponse
 
@@ -35,7 +36,7 @@ COLUMNS, SPACE_BYTES = 1200, 6 * 2**30
 #: Products of all answers with the stored entries of the matrices that are made without hesitation.
 CHEAP = 2e8
 #: Frequencies that stand for all while the space grows.
-WATCHED = 24
+WATCHED = 16
 
 
 def full_response(
@@ -121,7 +122,7 @@ class _Work:
             space.expand()
             if space.done < check:
                 continue
-            check = space.done + max(space.done // 10, 4)
+            check = space.done + max(space.done // 8, 4)
             excess = self._excess(space, watched)
             if np.all(excess <= 1):
                 return
@@ -146,31 +147,26 @@ class _Work:
         Where products with every answer would take long, the matrices' images of the basis are combined instead (the
         same residual but for rounding) and about eight of the frequencies are checked by themselves.
         """
-        X = space.X
-        images = [times(A, X) for A in self.dynamic.parts]
+        images = Images(self.dynamic, space.X)
         stored = sum(A.nnz if hasattr(A, "nnz") else A.size for A in self.dynamic.parts)
         each = 1 if stored * len(todo) * self.dynamic.F.shape[1] < CHEAP else max(len(todo) // 8, 1)
         solved = []
-        for start in range(0, len(todo), 32):
-            at = todo[start : start + 32]
+        for start in range(0, len(todo), PIECE):
+            at = todo[start : start + PIECE]
             for k, (i, y) in enumerate(zip(at, space.answers(self.omega[at]), strict=True), start=start):
-                if self._keep(int(i), X, images if k % each else None, y):
+                if self._keep(int(i), images, y, itself=k % each == 0):
                     solved.append(i)
         return np.array(solved, dtype=int)
 
-    def _keep(self, i: int, X: Any, images: list[Any] | None, y: Any) -> bool:
+    def _keep(self, i: int, images: Images, y: Any, *, itself: bool) -> bool:
         w = float(self.omega[i])
-        x = _product(X, y)
-        if images is None:
-            _, backward, residual = errors(self.dynamic, w, x)
-        else:
-            R = self.dynamic.F - self.dynamic.low_rank(w, x)
-            for factor, image in zip(self.dynamic.coefficients(w), images, strict=True):
-                R = R - _product(image, factor * y)
-            backward, residual = worst(R, x, self.dynamic.F, self.dynamic.norm(w))
+        backward, residual = images.errors(w, y)
+        if itself:
+            _, one, other = errors(self.dynamic, w, images.solution(y))
+            backward, residual = max(backward, one), max(residual, other)
         if not backward <= self.tolerance:
             return False
-        self.G[i] = self.dynamic.response(w, x)
+        self.G[i] = images.response(w, y)
         self.backward[i], self.residual[i], self.method[i] = backward, residual, "krylov"
         return True
 
@@ -211,12 +207,3 @@ def _column_limit(N: int, parts: int, dtype: Any) -> int:
     """Columns of a basis of N rows that fit the allowance, with their images under the parts."""
     size = np.dtype(dtype).itemsize * N * (1 + parts)
     return int(max(16, min(COLUMNS, N, min(SPACE_BYTES, free_bytes() // 2) // size)))
-
-
-def _product(A: Any, y: Any) -> Any:
-    """``A y`` for a basis A, real or complex, and complex y."""
-    if np.iscomplexobj(A):
-        return A @ y
-    both = A @ np.concatenate([y.real, y.imag], axis=1)
-    k = y.shape[1]
-    return both[:, :k] + 1j * both[:, k:]
