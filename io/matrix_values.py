@@ -14,6 +14,8 @@ from modesieve.io.matrices import Stored
 from modesieve.reduce.arrays import Real, Sparse
 from modesieve.reduce.errors import FileError, ModelError
 
+_ROWS_AT_ONCE = 20_000  # when one triangle is completed
+
 
 def read_sparse(stored: Stored) -> Sparse:
     """The matrix as a canonical float64 CSR array: sorted indices, duplicates summed, both triangles."""
@@ -74,7 +76,10 @@ def _from_compressed(stored: Stored) -> Sparse:
     _check_pointers(pointers, stored)
     minor = _minor(stored, shape[1], index)
     matrix = sp.csr_array((_values(stored), minor, pointers), shape=shape, copy=False)
-    return matrix if stored.layout == "CSR" else matrix.T.tocsr()
+    if stored.layout == "CSR":
+        return matrix
+    stored.source.budget.take(matrix.nnz * (8 + index().itemsize) + 8 * shape[1], stored.where)
+    return matrix.T.tocsr()
 
 
 def _from_coordinates(stored: Stored) -> Sparse:
@@ -139,31 +144,52 @@ def _dense_rows(stored: Stored) -> Sparse:
 
 def _both_triangles(half: Sparse, stored: Stored) -> Sparse:
     """``half + half^T - diag(half)``; explicit zeros stay (a solver may need them on the diagonal)."""
+    _check_triangle(half, stored)
+    stored.source.budget.take(3 * half.nnz * (8 + half.indices.itemsize), stored.where)
+    other = half.T.tocsr()
+    lower, upper = (half, other) if stored.symmetric == "lower" else (other, half)
     n = half.shape[0]
-    rows = np.repeat(np.arange(n, dtype=half.indices.dtype), np.diff(half.indptr))
-    outside = (half.indices > rows) if stored.symmetric == "lower" else (half.indices < rows)
-    if outside.any():
-        at = int(np.argmax(outside))
-        raise ModelError(
-            "entries lie outside the stored triangle",
-            expected=f"the {stored.symmetric} triangle only",
-            got=f"{int(np.count_nonzero(outside))} entries outside, first at ({rows[at]}, {half.indices[at]})",
-            where=stored.where,
-            remedy="leave the attribute symmetric out if both triangles are stored",
-        )
-    off = half.indices != rows
-    mirror = sp.coo_array((half.data[off], (half.indices[off], rows[off])), shape=half.shape).tocsr()
-    del rows, outside, off
-    return _interleaved(half, mirror) if stored.symmetric == "lower" else _interleaved(mirror, half)
-
-
-def _interleaved(left: Sparse, right: Sparse) -> Sparse:
-    """The sum of two CSR arrays, every row of ``left`` wholly left of the same row of ``right``."""
-    pointers = left.indptr.astype(np.int64) + right.indptr
+    diagonal = _ends_on_diagonal(lower)
+    pointers = lower.indptr.astype(np.int64) + upper.indptr - np.concatenate([[0], np.cumsum(diagonal)])
     total = int(pointers[-1])
     index = np.int32 if total < 2**31 - 1 else np.int64
     indices, data = np.empty(total, dtype=index), np.empty(total)
-    for part, shift in ((left, right.indptr[:-1]), (right, left.indptr[1:])):
-        at = np.arange(part.nnz) + np.repeat(shift, np.diff(part.indptr))
-        indices[at], data[at] = part.indices, part.data
-    return sp.csr_array((data, indices, pointers.astype(index)), shape=left.shape, copy=False)
+    for low in range(0, n, _ROWS_AT_ONCE):
+        rows = np.arange(low, min(low + _ROWS_AT_ONCE, n))
+        left = np.diff(lower.indptr[low : rows[-1] + 2])
+        _place(lower, rows, pointers[rows], np.zeros(len(rows), dtype=np.int64), indices, data)
+        _place(upper, rows, pointers[rows] + left, diagonal[rows].astype(np.int64), indices, data)
+    return sp.csr_array((data, indices, pointers.astype(index)), shape=half.shape, copy=False)
+
+
+def _check_triangle(half: Sparse, stored: Stored) -> None:
+    full = np.flatnonzero(np.diff(half.indptr))
+    lower = stored.symmetric == "lower"
+    extreme = half.indices[half.indptr[full + 1] - 1] if lower else half.indices[half.indptr[full]]
+    outside = np.flatnonzero(extreme > full if lower else extreme < full)
+    if outside.size:
+        at = outside[0]
+        raise ModelError(
+            "entries lie outside the stored triangle",
+            expected=f"the {stored.symmetric} triangle only",
+            got=f"{outside.size} rows with entries outside, first at ({full[at]}, {extreme[at]})",
+            where=stored.where,
+            remedy="leave the attribute symmetric out if both triangles are stored",
+        )
+
+
+def _ends_on_diagonal(lower: Sparse) -> Any:
+    """Mask (n,) of the rows whose last entry is the diagonal one."""
+    full = np.flatnonzero(np.diff(lower.indptr))
+    out = np.zeros(lower.shape[0], dtype=bool)
+    out[full] = lower.indices[lower.indptr[full + 1] - 1] == full
+    return out
+
+
+def _place(part: Sparse, rows: Any, starts: Any, skip: Any, indices: Any, data: Any) -> None:
+    """Copy the given rows of ``part``, each without its first ``skip`` entries, to where they begin in the whole."""
+    first, last = part.indptr[rows] + skip, part.indptr[rows + 1]
+    counts = last - first
+    offsets = np.arange(int(counts.sum())) - np.repeat(np.cumsum(counts) - counts, counts)
+    source, target = np.repeat(first, counts) + offsets, np.repeat(starts, counts) + offsets
+    indices[target], data[target] = part.indices[source], part.data[source]

@@ -198,6 +198,23 @@ def test_round_trip_of_random_matrices(tmp_path, rows, columns, seed, layout):
     assert np.array_equal(read(path, Place(path="dense"), dense=True), K.toarray())
 
 
+@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+@given(st.integers(1, 12), st.integers(0, 2**31), st.sampled_from(["lower", "upper"]), st.booleans())
+def test_one_triangle_of_random_matrices(tmp_path, n, seed, triangle, by_columns):
+    """One triangle of any symmetric matrix, empty rows and missing diagonals included, gives the whole."""
+    rng = np.random.default_rng(seed)
+    half = sp.random_array((n, n), density=rng.random(), rng=rng, format="csr")
+    half = (sp.tril(half) if triangle == "lower" else sp.triu(half)).tocsr()
+    path = tmp_path / "m.h5"
+    with h5py.File(path, "w") as file:
+        stored = half.tocsc() if by_columns else half
+        plain(file.create_group("K"), stored, symmetric=triangle, layout="CSC" if by_columns else "CSR")
+    whole = half.toarray() + half.toarray().T - np.diag(half.diagonal())
+    out = read(path)
+    assert np.array_equal(out.toarray(), whole)
+    assert out.has_canonical_format
+
+
 def test_large_arrays_are_chunked(path):
     """Arrays of more than 4 MiB are written in chunks of 1 to 4 MiB."""
     with h5py.File(path, "w") as file:
