@@ -12,6 +12,7 @@ from modesieve.io.tables import (
     cautions_report,
     checks_table,
     comparison_head,
+    first_kept,
     guarantee_words,
     modes_head,
     modes_table,
@@ -45,7 +46,7 @@ def run_report(console: Console, result: Result) -> list[Any]:
     if pairs is not None:
         parts += ["", pairs]
     if comparison.sweep is not None:
-        parts += ["", sweep_table(console, comparison.sweep, len(small.kept))]
+        parts += ["", sweep_table(console, comparison.sweep, first_kept(result.ranking, small.kept))]
     return [*parts, "", *cautions_report(console, verdict)]
 
 

@@ -3,26 +3,31 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from modesieve.io.settings import Settings
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.comparison.compare import compare
-from modesieve.reduce.errors import ChoiceError
+from modesieve.reduce.comparison.records import Check
+from modesieve.reduce.errors import ChoiceError, ModesieveError
 from modesieve.reduce.modal.find import find_modes
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.modal.request import ALL_LIMIT
 from modesieve.reduce.model import Model
 from modesieve.reduce.progress import Listener
-from modesieve.reduce.truncation.records import Band, Choice, Keep, Tolerance
+from modesieve.reduce.report import share
+from modesieve.reduce.response.records import FullResponse
+from modesieve.reduce.truncation.records import Band, Keep, ReducedModel, Statics, Tolerance
 from modesieve.reduce.truncation.truncate import truncate
 
 #: Modes that a suggested band holds, about.
 _INSIDE = 10
 #: Frequencies at which the best small model is tried.
 _TRIES = 12
+#: Resonances among them.
+_PEAKS = 3
 #: A tolerance is suggested if the best small model is so many times better at the frequencies tried.
 _RESERVE = 4.0
 _LADDER = ((0.02, "local"), (0.05, "local"), (0.1, "local"), (0.02, "peak"), (0.05, "peak"), (0.1, "peak"))
@@ -51,8 +56,7 @@ def suggest(model: Model, progress: Listener = None) -> Suggestion:
         )
     lowest = find_modes(model, count=None if model.n <= ALL_LIMIT else 2 * _INSIDE, progress=progress)
     band = suggested_band(lowest)
-    choice, note = _choice(model, band, progress)
-    return Suggestion(settings=Settings(band=band, choice=choice), notes=(note,))
+    return _settings(model, band, progress)
 
 
 # ---- the band --------------------------------------------------------------------------------------------------------
@@ -117,41 +121,78 @@ def _halved(value: float, digits: int) -> float:
 # ---- the tolerance ---------------------------------------------------------------------------------------------------
 
 
-def _choice(model: Model, band: tuple[float, float], progress: Listener) -> tuple[Choice, str]:
-    """The tightest tolerance of the ladder that is met with reserve; else every mode in the band."""
-    modes = find_modes(model, band, progress=progress)  # as a run will: fewer than ``lowest`` in a small model
-    everything = Keep(numbers=tuple(int(i) for i in modes.numbers))
-    best = truncate(_without_model(modes), everything, band=band)
-    check = compare(
-        model, [best], modes=modes, band=band, omega=_trial(band, modes), times=False, sweep=False, progress=progress
-    ).checks[0]
-    inside = Band(low=band[0], high=band[1])
-    if not check.local_error.defined:
-        return inside, f"no tolerance: {check.local_error.note}"
+def _settings(model: Model, band: tuple[float, float], progress: Listener) -> Suggestion:
+    """The tightest tolerance of the ladder that is met with reserve, with the best statics without pseudo-modes where
+    they do, else with them; else every mode in the band."""
+    modes = find_modes(model, band, progress=progress)  # as a run will
+    everything, omega = Keep(numbers=tuple(int(i) for i in modes.numbers)), _trial(band, modes)
+    full: FullResponse | None = None
+    notes: list[str] = []
+    for statics in _STATICS:
+        best = _best(modes, everything, statics, band, full)
+        if best is None:
+            continue
+        comparison = compare(
+            model, [best], modes=modes, band=band, omega=omega, full=full, times=False, sweep=False, progress=progress
+        )
+        check, full = comparison.checks[0], comparison.full
+        if not check.local_error.defined:
+            return Suggestion(settings=_whole(band), notes=(f"no tolerance: {check.local_error.note}",))
+        notes.append(_told(check, len(modes)))
+        found = _met(check)
+        if found is not None:
+            return Suggestion(settings=Settings(band=band, choice=found, statics=statics), notes=tuple(notes))
+    return Suggestion(settings=_whole(band), notes=(*notes, "no usual tolerance is safely within reach"))
+
+
+#: In the order tried.
+_STATICS: tuple[Statics | None, ...] = (None, "vectors")
+
+
+def _whole(band: tuple[float, float]) -> Settings:
+    return Settings(band=band, choice=Band(low=band[0], high=band[1]))
+
+
+def _best(
+    modes: Modes,
+    everything: Keep,
+    statics: Statics | None,
+    band: tuple[float, float],
+    full: FullResponse | None,
+) -> ReducedModel | None:
+    """The small model with every computed mode; None where these statics cannot be had."""
+    # Without a model nothing is solved for the error; pseudo-modes need the model, and a response to measure on.
+    source = replace(modes, model=None, workspace=None) if statics is None else modes
+    try:
+        return truncate(source, everything, statics=statics, band=band, full=full)
+    except ModesieveError:
+        if statics is None:
+            raise
+        return None
+
+
+def _met(check: Check) -> Tolerance | None:
     found = {"local": check.local_error.value, "peak": check.peak_error.value}
     for value, of in _LADDER:
         if found[of] * _RESERVE <= value:
-            return Tolerance(value=value, of="peak" if of == "peak" else "local"), _told(found, len(modes))
-    return inside, _told(found, len(modes)) + ": no usual tolerance is safely within reach"
+            return Tolerance(value=value, of="peak" if of == "peak" else "local")
+    return None
 
 
-def _told(found: dict[str, float], count: int) -> str:
+def _told(check: Check, count: int) -> str:
     return (
-        f"all {count} computed modes are off by {100 * found['local']:.2g} % of local, {100 * found['peak']:.2g} % of "
-        "peak at the frequencies tried"
+        f"all {count} computed modes, statics {check.small.statics}: off by {share(check.local_error.value)} of local, "
+        f"{share(check.peak_error.value)} of peak at the frequencies tried"
     )
 
 
-def _without_model(modes: Modes) -> Modes:
-    """The modes alone, so that nothing is solved beyond the frequencies tried."""
-    from dataclasses import replace
-
-    return replace(modes, model=None, workspace=None)
-
-
 def _trial(band: tuple[float, float], modes: Modes) -> Real:
-    """Frequencies through the band, not on resonances, up to its top."""
+    """Frequencies through the band up to its top, and the strongest resonances, so that the peak is among them."""
     low, high = band
     if modes.origin.kind == "thermal":
         return np.geomspace(low, high, _TRIES)
-    return np.linspace(max(low, 0.02 * high), high, _TRIES)
+    spread = np.linspace(max(low, 0.02 * high), high, _TRIES)
+    inside = modes.omega[(modes.omega > spread[0]) & (modes.omega < high)]
+    G = np.abs(modes.origin.weigh(modes.system.response(inside))).max(axis=(1, 2), initial=0.0)
+    strongest = inside[np.argsort(-np.nan_to_num(G, posinf=0.0), kind="stable")[:_PEAKS]]
+    return np.unique(np.concatenate([spread, strongest]))

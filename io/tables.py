@@ -331,11 +331,16 @@ def sweep_table(console: Console, sweep: Sweep, kept: int, limit: int = 14) -> R
     return table(console, columns, f"Error in % over kept count, by {sweep.ranked_by}, {sweep.certainty}", left=())
 
 
+def first_kept(ranking: Ranking, kept: Sequence[int]) -> int:
+    """How many modes are kept if they are the first of the ranking, else 0: the sweep keeps in rank order only."""
+    return len(kept) if set(kept) == {int(i) for i in ranking.order[: len(kept)]} else 0
+
+
 def _picked(counts: Any, kept: int, limit: int) -> list[int]:
     """Indices to show: spread over the whole curve in equal ratios, and the neighbours of the chosen count."""
     last = len(counts) - 1
     at = int(np.searchsorted(counts, kept))
-    near = {i for i in (at - 1, at, at + 1) if 0 <= i <= last}
+    near = {i for i in (at - 1, at, at + 1) if 0 <= i <= last} if kept else set[int]()
     spread = np.geomspace(1, last + 1, max(limit - len(near), 2)).round().astype(int) - 1
     return sorted(near | {int(i) for i in spread})
 

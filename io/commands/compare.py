@@ -17,6 +17,7 @@ from modesieve.io.run import Written, write_figures
 from modesieve.io.tables import (
     checks_table,
     comparison_head,
+    first_kept,
     outputs_table,
     sweep_table,
     written_table,
@@ -88,6 +89,12 @@ def _ranking(comparison: Comparison) -> Ranking:
     return rank(comparison.modes, by=asked[0] if asked else "band-share", band=comparison.band)
 
 
+def _marked(comparison: Comparison) -> int:
+    """The kept count of the first small model if it is one of the sweep's, else 0."""
+    small = comparison.checks[0].small
+    return 0 if small.ranking is None else first_kept(small.ranking, small.kept)
+
+
 def _cautions(files: tuple[Path, ...], verdicts: list[Verdict]) -> list[str]:
     """What concerns one small model first, with its name, then what concerns all of them."""
     shared = [text for text in verdicts[0].cautions if all(text in verdict.cautions for verdict in verdicts)]
@@ -109,7 +116,7 @@ def _print(comparison: Comparison, files: tuple[Path, ...], written: list[Writte
     names = [str(path) for path in files]
     parts += [comparison_head(console, comparison), "", checks_table(console, comparison, names)]
     if comparison.sweep is not None:
-        parts += ["", sweep_table(console, comparison.sweep, len(comparison.checks[0].small.kept))]
+        parts += ["", sweep_table(console, comparison.sweep, _marked(comparison))]
     parts += ["", "Cautions", bullets(console, _cautions(files, verdicts))]
     if written:
         parts += ["", written_table(console, written)]
