@@ -33,8 +33,23 @@ class Array:
     def size(self) -> int:
         return int(np.prod([int(s) for s in self.shape], dtype=object)) if self.shape else 1
 
-    def pieces(self) -> Iterator[tuple[Any, Any]]:
-        """The content along the first axis, piece by piece, as stored."""
+    def pieces(self, out: Any = None) -> Iterator[tuple[Any, Any]]:
+        """The content along the first axis, piece by piece, as stored; each piece is valid until the next.
+
+        out: an array of the same shape and type to read straight into.
+        """
+        if not self.shape or self.content == "text":
+            yield from self._fresh_pieces()
+            return
+        target: Any = np.empty((self.rows, *self.shape[1:]), dtype=self.dtype) if out is None else out
+        for start in range(0, self.shape[0], self.rows):
+            part = slice(start, min(start + self.rows, self.shape[0]))
+            into = slice(0, part.stop - start) if out is None else part
+            with reading(self.where):
+                self.node.read_direct(target, part, into)
+            yield part, target[into]
+
+    def _fresh_pieces(self) -> Iterator[tuple[Any, Any]]:
         if not self.shape:
             with reading(self.where):
                 whole = self.node[()]
@@ -94,9 +109,11 @@ def read_real(
     if data.content == "text" or (data.content == "complex" and not complex_too):
         raise _wrong_type(data, "real numbers" if not complex_too else "numbers")
     out = np.empty(data.shape, dtype=dtype)
-    for part, piece in data.pieces():
-        with np.errstate(over="ignore", invalid="ignore"):  # what does not fit becomes inf and is refused below
-            out[part] = piece
+    direct = out if data.dtype == out.dtype and data.shape else None
+    for part, piece in data.pieces(direct):
+        if direct is None:
+            with np.errstate(over="ignore", invalid="ignore"):  # what does not fit becomes inf and is refused below
+                out[part] = piece
         check_finite(out[part], data, what, finite)
     return out
 

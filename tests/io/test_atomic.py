@@ -86,6 +86,22 @@ def test_disk_full_message(tmp_path, monkeypatch):
     assert names(tmp_path) == ["a.txt"]
 
 
+def test_killed_while_writing(tmp_path):
+    """A writer that is killed in the middle leaves the old file whole."""
+    path = tmp_path / "a.txt"
+    path.write_text("old")
+    code = """
+import os, signal, sys
+from modesieve.io.atomic import replacing
+with replacing(sys.argv[1]) as temporary:
+    temporary.write_text("half")
+    os.kill(os.getpid(), signal.SIGKILL)
+"""
+    done = subprocess.run([sys.executable, "-c", code, str(path)], check=False, timeout=60)
+    assert done.returncode == -9
+    assert path.read_text() == "old"
+
+
 def test_size_limit_while_hdf5_writes(tmp_path):
     """When HDF5 itself cannot write on, the old file stays, no temporary remains and the message is a file error."""
     path = tmp_path / "a.h5"
