@@ -1,4 +1,4 @@
-"""The two demos, in places that do not exist: a lantern mast on a harbour mole, and the cold plate of a weather buoy."""
+"""The two demos, in places that do not exist: a lantern mast on a harbour mole, the cold plate of a weather buoy."""
 
 from __future__ import annotations
 
@@ -101,7 +101,7 @@ def _lattice() -> tuple[Real, list[tuple[int, int]], list[bool]]:
 
 
 def cold_plate() -> Demo:
-    """The cold plate of Petrel Buoy: 0.30 m by 0.20 m of 6 mm aluminium, five heat sources, six sensors, sea water film.
+    """The cold plate of Petrel Buoy: 0.30 m by 0.20 m of 6 mm aluminium, five sources, six sensors, sea water behind.
 
     48 by 32 bilinear elements, conduction in the plane, a film on the whole back towards water at its own temperature.
     """
@@ -139,9 +139,7 @@ def cold_plate() -> Demo:
         ),
         outputs=tuple(Output(name=f"T {name}", unit="K", resolution=0.1) for name in sensors),
         units=UnitSystem(length="m", mass="kg", time="s", temperature="K"),
-        unknowns=Unknowns(
-            node=tuple(str(i + 1) for i in range(x.size)), xyz=np.column_stack([x, y, np.zeros(x.size)])
-        ),
+        unknowns=Unknowns(node=tuple(str(i + 1) for i in range(x.size)), xyz=np.column_stack([x, y, np.zeros(x.size)])),
         title="cold plate, Petrel Buoy",
     )
     return Demo(

@@ -38,7 +38,7 @@ def grid_plate_rates(nx: int, ny: int) -> Real:
 
 
 def flow_plate(nx: int, ny: int, *, peclet: float = 0.5) -> StateSpace:
-    """Conduction with an upwind flow along x (non-symmetric), inflow held at 0, one source and one sensor downstream."""
+    """Conduction with an upwind flow along x (non-symmetric), inflow held at 0, one source, one sensor downstream."""
     conduct = sp.kron(tridiagonal(nx, 2.0, 1.0), sp.eye_array(ny)) + sp.kron(
         sp.eye_array(nx), tridiagonal(ny, 1.0, 1.0)
     )
@@ -85,7 +85,9 @@ def solid(
     F[row(nx, 0, 0, 2), 0] = F[row(nx, ny, nz, 1), 1] = 1.0
     for line, at in enumerate([(nx, ny, nz, 2), (nx, 0, 0, 1), (nx // 2, ny // 2, nz, 2)]):
         C[line, row(*at)] = 1.0
-    xyz = np.stack(np.meshgrid(*(np.linspace(0, s, q + 1) for s, q in zip(size, (nx, ny, nz), strict=True)), indexing="ij"))
+    xyz = np.stack(
+        np.meshgrid(*(np.linspace(0, s, q + 1) for s, q in zip(size, (nx, ny, nz), strict=True)), indexing="ij")
+    )
     free = np.arange(first, nodes.size)
     return Structure(
         K=K,
@@ -115,7 +117,9 @@ def hexahedron(h: tuple[float, ...], E: float, nu: float, rho: float) -> tuple[R
     for point in signs / np.sqrt(3):
         factors = 1 + signs * point
         N = np.prod(factors, axis=1) / 8
-        slopes = np.stack([signs[:, a] * np.prod(np.delete(factors, a, axis=1), axis=1) / 8 * 2 / h[a] for a in range(3)])
+        slopes = np.stack(
+            [signs[:, a] * np.prod(np.delete(factors, a, axis=1), axis=1) / 8 * 2 / h[a] for a in range(3)]
+        )
         B = np.zeros((6, 24))
         for a in range(3):
             B[a, a::3] = slopes[a]

@@ -18,6 +18,8 @@ from modesieve.reduce.response.dynamic import Dynamic
 #: Singular to working precision: an answer larger than this many times ``norm(F)`` over the size of Z, which still
 #: leaves this relative residual.
 BLOWN_UP, LEFT_OVER = 1e11, 1e-3
+#: Models of this size are solved densely when they carry modal damping.
+WHOLE = 400
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -92,6 +94,9 @@ def _is_regular(dynamic: Dynamic) -> bool:
 
 def _inverse(dynamic: Dynamic, omega: float, solver: SolverName) -> tuple[Any, str]:
     Z = dynamic.matrix(omega)
+    if dynamic.U is not None and dynamic.d is not None and sp.issparse(Z) and Z.shape[0] <= WHOLE:
+        # Modal damping on most of a small model: the low-rank formula would divide by the undamped resonance.
+        return _dense_inverse(Z.toarray() + 1j * omega * (dynamic.U * dynamic.d) @ dynamic.U.T), "LAPACK"
     if sp.issparse(Z):
         factor = factorise(Z, symmetry="indefinite" if dynamic.symmetric else "none", solver=solver)
         solve, name = factor.solve, factor.solver
