@@ -113,8 +113,8 @@ def cold_plate() -> Demo:
     area = sp.kron(Mx, My)
     K = t * conductivity * (sp.kron(Kx, My) + sp.kron(Mx, Ky)) + film * area
     E = t * heat * area
-    x, y = np.meshgrid(np.linspace(0, lx, nx + 1), np.linspace(0, ly, ny + 1), indexing="ij")
-    x, y = x.ravel(), y.ravel()
+    mesh = np.meshgrid(np.linspace(0, lx, nx + 1), np.linspace(0, ly, ny + 1), indexing="ij")
+    x, y = (part.ravel() for part in mesh)
     weight = np.asarray(area.sum(axis=1)).ravel()
     patches = {
         "radio": (0.05, 0.05, 0.03, 12.0),

@@ -6,7 +6,7 @@ import numpy as np
 import scipy.sparse as sp
 
 from modesieve.examples.lines import tridiagonal
-from modesieve.reduce.arrays import Real
+from modesieve.reduce.arrays import Ints, Real
 from modesieve.reduce.model import Damping, Input, Output, StateSpace, Structure, Thermal, Unknowns
 
 
@@ -69,9 +69,9 @@ def solid(
 
     40 x 32 x 20 elements clamped have 83,160 unknowns, 24 x 16 x 10 have 13,464.
     """
-    nodes = np.arange((nx + 1) * (ny + 1) * (nz + 1)).reshape(nx + 1, ny + 1, nz + 1)
+    nodes = np.arange((nx + 1) * (ny + 1) * (nz + 1), dtype=np.int64).reshape(nx + 1, ny + 1, nz + 1)
     k, m = hexahedron(tuple(s / n for s, n in zip(size, (nx, ny, nz), strict=True)), E, nu, rho)
-    corners = np.stack(
+    corners: Ints = np.stack(
         [nodes[i : nx + i, j : ny + j, l : nz + l].ravel() for i in (0, 1) for j in (0, 1) for l in (0, 1)], axis=1
     )
     first = (ny + 1) * (nz + 1) if clamped else 0
@@ -131,7 +131,7 @@ def hexahedron(h: tuple[float, ...], E: float, nu: float, rho: float) -> tuple[R
     return k, m
 
 
-def _assemble(corners: Real, element: Real, nodes: int) -> sp.csr_array:
+def _assemble(corners: Ints, element: Real, nodes: int) -> sp.csr_array:
     unknowns = (3 * corners[:, :, None] + np.arange(3)).reshape(len(corners), 24)
     rows, columns = np.repeat(unknowns, 24, axis=1).ravel(), np.tile(unknowns, (1, 24)).ravel()
     data = np.broadcast_to(element.ravel(), (len(corners), 576)).ravel()

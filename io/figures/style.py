@@ -43,7 +43,8 @@ SETTINGS: dict[str, Any] = {
 @contextmanager
 def styled() -> Iterator[None]:
     """The settings of every plate, for the time of drawing."""
-    with mpl.rc_context(SETTINGS):
+    settings: Any = SETTINGS  # matplotlib's own type lists every key
+    with mpl.rc_context(settings):
         yield
 
 

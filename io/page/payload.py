@@ -212,6 +212,6 @@ def shape_data(modes: Modes) -> dict[str, Any] | None:
     return {"xyz": packed(xyz), "moves": packed(moves), "lines": lines.tolist() if len(lines) < 20_000 else []}
 
 
-def _directions(unknowns: Unknowns, axis: int) -> Real:
+def _directions(unknowns: Unknowns, axis: int) -> Any:
     spellings = {"xyz"[axis], "u" + "xyz"[axis], str(axis + 1)}
     return np.flatnonzero([d.lower() in spellings for d in unknowns.direction])

@@ -1,6 +1,6 @@
 """Real block modal form of a dense matrix: single modes where they mean something, blocks where only groups do.
 
-``kappa_i = norm(w_i) norm(v_i)/abs(v_i^H w_i)`` tells how far eigenvalue i moves under a perturbation. Where it is large
+``kappa_i = norm(w_i) norm(v_i)/abs(v_i^H w_i)`` tells how far eigenvalue i moves when perturbed. Where it is large
 (near-defective groups, strongly non-normal matrices) the sum over single modes loses as many digits as kappa has; such
 eigenvalues are taken together by a reordered real Schur form and decoupled from the rest by a Sylvester equation
 (C. A. Bavely and G. W. Stewart, SIAM J. Numer. Anal. 16 (1979) 359-367).
@@ -165,8 +165,8 @@ def _single_terms(
 ) -> list[Term]:  # fmt: skip
     W = right[:, members]
     if len(members) > 1:
-        V = left[:, members].conj().T
-        V = np.linalg.solve(V @ W, V)
+        V: Complex = left[:, members].conj().T
+        V = np.asarray(np.linalg.solve(V @ W, V), dtype=np.complex128)
         small = V @ A @ W - np.diag(lam[members])
         if np.linalg.norm(small) > 10 * _ROUNDINGS * np.linalg.norm(rounding[members]):
             return _joint_of_vectors(A, lam[members], W)

@@ -97,7 +97,7 @@ def _no_stiffness(got: str) -> SolveError:
     )
 
 
-def _refuse_rates(value: Real, C: Real, answer: Real, model: Structure) -> None:
+def _refuse_rates(value: Real, C: Real, answer: Real, model: Structure | Thermal) -> None:
     size = np.abs(C) @ np.abs(answer)
     bad = np.argwhere(np.abs(value) > _ROUNDING * np.where(size > 0, size, 1.0))
     if len(bad):

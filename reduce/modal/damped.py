@@ -90,7 +90,7 @@ def _refuse_large(model: Structure) -> None:
             f"complex modes of {model.n} unknowns are too many for the dense solver",
             expected=f"at most {DENSE_LIMIT // 2} unknowns with local damping",
             got=f"{model.n}",
-            remedy="leave the local damping out and use base damping (ratios, Rayleigh, loss factor): that stays sparse",
+            remedy="leave the local damping out and use base damping (ratios, Rayleigh, loss factor): sparse",
         )
 
 

@@ -80,7 +80,7 @@ def _dense_matrices(model: StateSpace) -> tuple[Real, Real | None, list[str]]:
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Listing:
-    """Modes in ascending abs(eigenvalue): value, term, condition (k,); order of the terms is that of their first mode."""
+    """Modes in ascending abs(eigenvalue): value, term, condition (k,); terms in the order of their first mode."""
 
     value: Complex
     term: Ints

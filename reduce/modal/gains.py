@@ -2,7 +2,7 @@
 
 A term's squared gain is ``N(t)/D(t)``, t = omega^2, with ``N = A0 + A1 t + A2 t^2`` from its weighted couplings and
 
-    oscillating   D = (x - t)^2 + (d omega + eta x)^2     (second order; a complex pair has x = |lambda|^2, d = -2 Re lambda)
+    oscillating   D = (x - t)^2 + (d omega + eta x)^2     (second order; a pair has x = |lambda|^2, d = -2 Re lambda)
     real pole     D = lambda^2 + t                        (A1: the square of a direct part)
 
 so that suprema are roots of one quadratic. The norm is Frobenius' (the only one for a rank-one term).

@@ -23,9 +23,9 @@ _LIFT = 1e-10
 
 @dataclass(frozen=True, kw_only=True)
 class Asymmetry:
-    """Largest difference of mirrored entries, relative to the geometric mean of their diagonal entries (or to the larger
-    of the two), at (row, column), 0-based; count: pairs that differ by more than 1e-8; triangular: "lower" or "upper"
-    where the other triangle is empty."""
+    """Largest difference of mirrored entries, relative to the geometric mean of their diagonal entries (or to the
+    larger of the two), at (row, column), 0-based; count: pairs that differ by more than 1e-8; triangular: "lower" or
+    "upper" where the other triangle is empty."""
 
     worst: float = 0.0
     row: int = 0

@@ -1,7 +1,7 @@
-"""Eigenvalues that are zero: rigid-body and integrating modes, told from flexible ones by rounding, not by a frequency.
+"""Eigenvalues that are zero: rigid-body and integrating modes, told from flexible ones by rounding, not by frequency.
 
-A relative change eps of every entry of K moves ``x`` by at most ``eps abs(phi)^T abs(K) abs(phi)``; what is smaller than
-that for the rounding of double precision, or of the digits that a file holds, is zero as far as anyone can tell.
+A relative change eps of every entry of K moves ``x`` by at most ``eps abs(phi)^T abs(K) abs(phi)``; what is smaller
+than that for the rounding of double precision, or of the digits that a file holds, is zero as far as anyone can tell.
 """
 
 from __future__ import annotations

@@ -54,7 +54,7 @@ def _free(model: Structure, D: Real, H: Real | None, M: Real, rigid: Real) -> Re
     if rigid.shape[1] == 0:
         return rigid
     resisted = np.vstack([D @ rigid, *([] if H is None else [H @ rigid])])
-    scale = max(np.linalg.norm(np.abs(D) @ np.abs(rigid)), 0.0 if H is None else np.linalg.norm(np.abs(H) @ np.abs(rigid)))
+    scale = max(np.linalg.norm(np.abs(part) @ np.abs(rigid)) for part in (D, H) if part is not None)
     _, s, Vt = np.linalg.svd(resisted, full_matrices=True)
     size = np.zeros(rigid.shape[1])
     size[: len(s)] = s

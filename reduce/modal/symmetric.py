@@ -1,6 +1,6 @@
 """Modes of symmetric pencils: structures whose damping leaves the real modes uncoupled, and thermal models.
 
-``K phi = x M phi``, ``phi^T M phi = I``; x = omega^2 for a structure, x = -lambda for a thermal model (M: its capacity).
+``K phi = x M phi``, ``phi^T M phi = I``; x = omega^2 for a structure, x = -lambda for a thermal model (M: capacity).
 """
 
 from __future__ import annotations
@@ -144,8 +144,10 @@ def _static(
 def _assemble(model: Structure | Thermal, shapes: _Shapes, massless: Real, certificate: Certificate) -> Modes:
     x, phi, rigid = shapes.x, shapes.phi, shapes.zeros.zero
     warnings = [*shapes.zeros.warnings]
+    system: SmallSystem
+    value: Complex
     if isinstance(model, Thermal):
-        system, value = _first_order(model, x, phi, massless), -x + 0j
+        system, value = _first_order(model, x, phi, massless), (-x).astype(np.complex128)
         masses, total = None, None
     else:
         d, eta = modal_damping(model.damping.base, x, rigid)
@@ -213,8 +215,8 @@ def _structure_warnings(
     if slow.size:
         listed = ", ".join(str(i + 1) for i in slow[:5]) + (" ..." if slow.size > 5 else "")
         out.append(
-            f"{slow.size} overdamped mode{'s' * (slow.size > 1)} ({listed} by undamped frequency): two real poles each, "
-            "the table shows the slower one"
+            f"{slow.size} overdamped mode{'s' * (slow.size > 1)} ({listed} by undamped frequency): two real poles "
+            "each, the table shows the slower one"
         )
     if isinstance(base, RatioByMode) and any(len(set(np.minimum(g, len(base.ratio) - 1))) > 1 for g in groups):
         out.append("damping ratios by mode number differ inside a repeated mode: its members share their mean")
