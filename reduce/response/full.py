@@ -100,7 +100,7 @@ class _Work:
         for _ in range(SHIFTS):
             self.factorisations += 1
             space = KrylovResponse(operator, self.dynamic.F, form.terms, form.known_at(operator.shift))
-            self._grow(space, todo)
+            self._grow(space, todo, form.enough)
             solved = self._accept(space, todo)
             self.solves += operator.solves
             self.solver = getattr(operator, "solver", "")
@@ -113,7 +113,7 @@ class _Work:
             except SolveError:
                 return
 
-    def _grow(self, space: KrylovResponse, todo: Ints) -> None:
+    def _grow(self, space: KrylovResponse, todo: Ints, enough: int) -> None:
         """Expand until every watched frequency is answered, or nothing improves any more."""
         watched = self.omega[todo[np.unique(np.linspace(0, len(todo) - 1, WATCHED).astype(int))]]
         limit = _column_limit(space.operator.N, len(self.dynamic.parts), space.operator.dtype)
@@ -124,7 +124,8 @@ class _Work:
                 continue
             check = space.done + max(space.done // 8, 4)
             excess = self._excess(space, watched)
-            if np.all(excess <= 1):
+            answered = np.mean(excess <= 1)
+            if answered == 1 or (space.done >= enough and answered >= 0.25):
                 return
             score = float(np.sum(np.log10(np.clip(excess, 1.0, 1e10))))
             if score < best - 1:
