@@ -20,7 +20,7 @@ from modesieve.io.tables import (
     pairs_table,
     sweep_table,
 )
-from modesieve.io.terminal import labelled, screen, show
+from modesieve.io.terminal import bullets, labelled, screen, show
 from modesieve.reduce.truncation.records import ReducedModel
 
 
@@ -47,7 +47,16 @@ def run_report(console: Console, result: Result) -> list[Any]:
         parts += ["", pairs]
     if comparison.sweep is not None:
         parts += ["", sweep_table(console, comparison.sweep, first_kept(result.ranking, small.kept))]
+    notes = report_notes(result)
+    if notes:
+        parts += ["", "Notes", bullets(console, notes)]
     return [*parts, "", *cautions_report(console, verdict)]
+
+
+def report_notes(result: Result) -> list[str]:
+    """What was decided on the way; what the report says elsewhere is left out."""
+    said = {result.comparison.threshold_note, *result.verdict.cautions}
+    return [note for note in dict.fromkeys((*result.ranking.warnings, *result.reduced.notes)) if note not in said]
 
 
 def guarantee_report(console: Console, small: ReducedModel) -> list[Any]:

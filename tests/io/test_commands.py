@@ -3,8 +3,10 @@
 import json
 import os
 import re
+import signal
 import subprocess
 import sys
+import time
 
 import numpy as np
 import pytest
@@ -228,6 +230,15 @@ def test_compare_json_has_the_promised_keys(done, chain_file):
         assert one["certainty"] == "measured"
     assert found["models"][0]["dc_error"] < 1e-10
     assert found["models"][1]["dc_error"] > 1e-6
+
+
+def test_compare_takes_modes_from_a_file(done, chain_file):
+    """With --modes the same errors come out."""
+    done("modes", chain_file, "--band", "0Hz", "6Hz", "-o", "m.h5")
+    done("truncate", chain_file, "--modes", "m.h5", "--band", "0Hz", "4Hz", "--keep", 4, "-o", "a.h5")
+    plain = json.loads(done("compare", chain_file, "a.h5", "--json"))["models"][0]
+    given = json.loads(done("compare", chain_file, "a.h5", "--modes", "m.h5", "--json"))["models"][0]
+    assert given["max_relative_error"]["peak"] == pytest.approx(plain["max_relative_error"]["peak"], rel=1e-6)
 
 
 def test_free_bodies_have_no_static_error_and_say_why(done, here):
@@ -475,6 +486,24 @@ def test_interruption_is_clean(command, chain_file, monkeypatch):
     monkeypatch.setattr(module, "find_modes", interrupt)
     status, _, err = command("modes", chain_file)
     assert (status, err.strip()) == (130, "interrupted; no file was left half-written")
+
+
+def test_a_real_interruption_leaves_nothing_half_written(tmp_path):
+    """A process that gets the signal in the middle of its work ends with status 130 and no temporary files."""
+    code = "from modesieve.io.commands import main; main(['demo', '--out', 'out'])"
+    with subprocess.Popen(
+        [sys.executable, "-c", code], cwd=tmp_path, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+    ) as process:
+        deadline = time.monotonic() + 60
+        while not (tmp_path / "out/model.h5").exists():
+            assert time.monotonic() < deadline, "the demo did not start"
+            time.sleep(0.01)
+        process.send_signal(signal.SIGINT)
+        _, err = process.communicate(timeout=60)
+    assert process.returncode == 130
+    assert "interrupted" in err
+    assert "Traceback" not in err
+    assert not list(tmp_path.rglob("*.part"))
 
 
 def test_a_fault_of_the_program_is_owned_up_to(command, chain_file, monkeypatch, tmp_path):

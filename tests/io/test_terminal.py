@@ -106,6 +106,15 @@ def test_reports_speak_in_the_agreed_order(result):
     assert at == sorted(at)
 
 
+def test_notes_say_what_was_decided():
+    """A count that would split a cluster is told in the report."""
+    from modesieve.examples import mast
+
+    demo = mast()
+    found = run(demo.model, Settings(band=demo.band, choice=Count(modes=3), sweep=False, times=False))
+    assert "Notes\n· kept 2 modes, not 3" in run_text(found)
+
+
 def test_narrow_terminals_drop_columns_not_digits(result):
     """On 60 columns the modes table shows fewer measures, each whole."""
     stream = streams.StringIO()
