@@ -99,7 +99,7 @@ def kept_words(small: ReducedModel) -> str:
     """How much was kept, of how much."""
     origin, kept = small.modes.origin, len(small.kept)
     noun = "states" if origin.kind == "state space" else "unknowns"
-    size = f"{small.states} state{'s' * (small.states != 1)} for {origin.n} {noun}"
+    size = f"{small.states} state{'s' * (small.states != 1)} in place of {origin.n} {noun}"
     if not kept:
         return f"The small model has {size}"
     return f"{kept} of {len(small.modes)} computed modes {'are' if kept != 1 else 'is'} kept: {size}"

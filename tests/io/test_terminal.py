@@ -181,7 +181,7 @@ def test_verdict_names_numbers_and_certainty(result):
     """Kept, computed, unknowns, the error with its reference, and how it is known."""
     sentence = result.verdict.sentence
     kept = len(result.reduced.kept)
-    assert sentence.startswith(f"{kept} of {len(result.modes)} computed modes are kept: {2 * kept} states for 30")
+    assert sentence.startswith(f"{kept} of {len(result.modes)} computed modes are kept: {2 * kept} states in place of 30")
     assert "of the response at the same frequency" in sentence
     assert "at every frequency from 0 Hz to 4 Hz, guaranteed" in sentence
 
