@@ -74,6 +74,8 @@ def with_static_remainder(hub: Hub, kept: tuple[int, ...]) -> SmallSystem:
     Raises ChoiceError for velocity and acceleration outputs, whose remainder would grow with the frequency.
     """
     terms = hub.terms
+    if hub.levels == 0 and np.isfinite(hub.x_c):
+        raise ChoiceError("the hub does not know the statics", expected="at least one tail level", got="none")
     if np.any(terms.cv) or np.any(terms.ca):
         raise ChoiceError(
             "statics feedthrough is not possible here",
