@@ -21,10 +21,12 @@ from modesieve.reduce.errors import FileError, ModesieveError
 from modesieve.reduce.fingerprint import fingerprint
 from modesieve.reduce.model import Model, StateSpace, Structure
 from modesieve.reduce.response.full import full_response
+from modesieve.reduce.response.norms import largest_singular_value
 from modesieve.reduce.response.small import SecondOrderModal
 from modesieve.reduce.truncation.gauge import yardstick_for
 from modesieve.reduce.truncation.records import ReducedModel
 from modesieve.reduce.truncation.statics import cutter
+from modesieve.reduce.truncation.tails import with_tail_levels
 
 #: Recomputed figures agree to this, relative: both sides do the same arithmetic, perhaps on another processor.
 SAME = 1e-9
@@ -67,7 +69,15 @@ def review(path: Path, *, page: Path | None = None, full: Path | None = None) ->
             got=type(small).__name__.lower(),
             where=str(path),
         )
-    checks: list[Callable[[ReducedModel], Finding]] = [_cut_again, _model_agrees, _stable, _samples, _error, _count]
+    checks: list[Callable[[ReducedModel], Finding]] = [
+        _cut_again,
+        _model_agrees,
+        _stable,
+        _samples,
+        _error,
+        _guarantee,
+        _count,
+    ]
     findings = [seal, *(_guarded(check, small) for check in checks)]
     if page is not None:
         findings += _page(page, path, small)
@@ -116,11 +126,28 @@ def _grid(small: ReducedModel) -> Any:
 
 def _cut_again(small: ReducedModel) -> Finding:
     what = "small model cut again from the table"
-    if small.statics == "vectors":
-        return Finding(what=what, ok=None, seen="tail levels are made from the full model")
     omega = _grid(small)
-    again = cutter(small.modes, small.statics, 0)(small.kept)
+    if small.statics == "vectors":
+        if small.hub is None:
+            return Finding(what=what, ok=None, seen="tail levels are made from the full model")
+        again = with_tail_levels(small.hub, small.kept, small.levels).system
+    else:
+        again = cutter(small.modes, small.statics, 0)(small.kept)
     return _compare(what, again.response(omega), small.response(omega))
+
+
+def _guarantee(small: ReducedModel) -> Finding:
+    """The guaranteed curve again from the stored reference model, and every spot check inside it."""
+    what, hub, promise = "guarantee", small.hub, small.guarantee
+    if hub is None or promise is None:
+        return Finding(what=what, ok=None, seen="the file holds none")
+    if not promise.holds:
+        return Finding(what=what, ok=None, seen=f"withdrawn: {promise.reason}")
+    gap = largest_singular_value(hub.weigh(hub.response(promise.omega) - small.response(promise.omega)))
+    worst = float(np.max(np.abs(gap + hub.error(promise.omega) - promise.upper) / np.max(promise.upper), initial=0.0))
+    broken = [s for s in promise.spot_checks if s.error > s.high + s.slack]
+    seen = f"curve differs by {worst:.1e}, {len(promise.spot_checks)} spot checks, {len(broken)} outside the bound"
+    return Finding(what=what, ok=worst <= 1e-6 and not broken, seen=seen)
 
 
 def _model_agrees(small: ReducedModel) -> Finding:

@@ -5,10 +5,14 @@ import json
 import os
 from pathlib import Path
 
-import numpy as np
-import pytest
-import scipy.io
-import scipy.sparse as sp
+# One thread a test process: the processes already share the cores. Before numpy loads its libraries.
+for _name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
+    os.environ.setdefault(_name, "1")
+
+import numpy as np  # noqa: E402
+import pytest  # noqa: E402
+import scipy.io  # noqa: E402
+import scipy.sparse as sp  # noqa: E402
 
 #: What a file does not keep, by design: the full model, mode shapes and what a solver left in memory.
 NOT_STORED = ("model", "vectors", "left", "workspace")

@@ -28,6 +28,7 @@ COMMANDS: dict[str, tuple[str, str, str]] = {
         "Write a small model as arrays or as a stand-alone surrogate.",
     ),
     "review": ("modesieve.io.commands.review", "review", "Recompute what a small model's file can prove."),
+    "handover": ("modesieve.io.handover.command", "handover", "Bundle a run into one zip with hashes."),
     "simulate": ("modesieve.io.handover.command", "simulate", "Run a small model through an input history."),
 }
 

@@ -37,6 +37,7 @@ from modesieve.reduce.modal.records import Ranking
 @band_option
 @click.option("--out", type=FILE, metavar="DIR", help="Write figures and numbers into this folder.")
 @click.option("--page", type=FILE, metavar="FILE", help="Write the page of the first small model.")
+@click.option("--pdf", type=FILE, metavar="FILE", help="Write the same as a static report.")
 @json_option
 def compare(
     model_file: Path,
@@ -45,6 +46,7 @@ def compare(
     band: tuple[str, str] | None,
     out: Path | None,
     page: Path | None,
+    pdf: Path | None,
     as_json: bool,
 ) -> None:
     """Hold small models against the full one: errors in frequency, per output, and over the kept count."""
@@ -60,6 +62,8 @@ def compare(
     written = [] if out is None else _write(out, comparison, content)
     if page is not None:
         written.append(_write_page(page, comparison, model_file, small_files[0]))
+    if pdf is not None:
+        written.append(_write_pdf(pdf, comparison, model_file, small_files[0]))
     if as_json:
         click.echo(content, nl=False)
     else:
@@ -82,6 +86,16 @@ def _write_page(path: Path, comparison: Comparison, model_file: Path, small_file
     words = page_words(comparison, check, commands=commands)
     write_text(path, page_text(comparison, _ranking(comparison), words, file_seal=file_seal(small_file)[1]))
     return Written(path=path, purpose="the page of the first small model")
+
+
+def _write_pdf(path: Path, comparison: Comparison, model_file: Path, small_file: Path) -> Written:
+    from modesieve.io.figures import save_report
+    from modesieve.io.page import page_words, report_lines, reproduce
+
+    commands = reproduce(model_file.name, small_file.name, comparison, comparison.checks[0], "keep.toml")
+    words = page_words(comparison, comparison.checks[0], commands=commands)
+    save_report(path, comparison, _ranking(comparison), report_lines(words, comparison))
+    return Written(path=path, purpose="the static report of the first small model")
 
 
 def _ranking(comparison: Comparison) -> Ranking:

@@ -30,7 +30,7 @@ def demo(kind: str, out: Path | None) -> None:
     """
     folder = output_folder(out if out is not None else Path("modesieve-demo") / kind)
     example = _example(kind)
-    settings = _settings(example)
+    settings = settings_of(example)
     save(folder / MODEL, example.model)
     with ProgressDisplay() as progress:
         result = run(example.model, settings, progress)
@@ -43,9 +43,7 @@ def _example(kind: str) -> Demo:
     return mast() if kind == "structure" else cold_plate()
 
 
-def _settings(example: Demo) -> Settings:
-    """What its user would ask. Heat enters a plate through small patches, where modes alone converge slowly: there the
-    rest is held by one tail level."""
-    if example.model.kind == "thermal":
-        return Settings(band=example.band, choice=example.tolerance, statics="vectors", levels=1)
-    return Settings(band=example.band, choice=example.tolerance, statics=example.statics)
+def settings_of(example: Demo) -> Settings:
+    """What its user would ask; where pseudo-modes hold the rest, one tail level of them is enough."""
+    levels = 1 if example.statics == "vectors" else 2
+    return Settings(band=example.band, choice=example.tolerance, statics=example.statics, levels=levels)

@@ -228,3 +228,37 @@ def _beyond_band(t: Any, u: Any, top: float) -> float:
     omega = 2 * np.pi * np.fft.rfftfreq(len(even), even[1] - even[0])
     total = float(power.sum())
     return float(power[omega > top].sum()) / total if total > 0 else 0.0
+
+
+# ---- handover --------------------------------------------------------------------------------------------------------
+
+
+@click.command()
+@click.argument("job", metavar="BRIEF.toml|DIR", type=FILE)
+@click.option("-o", "--output", type=FILE, required=True, metavar="FOLDER.zip")
+def handover(job: Path, output: Path) -> None:
+    """Bundle a run (its folder, or a brief that is run first) into one zip with a manifest of hashes."""
+    import tempfile
+
+    from modesieve.io.handover.bundle import write_bundle
+
+    if job.is_dir():
+        names = write_bundle(job, output)
+    else:
+        with tempfile.TemporaryDirectory() as scratch:
+            _run_brief(job, Path(scratch))
+            names = write_bundle(Path(scratch), output)
+    click.echo(f"wrote {output}: {', '.join(names)}")
+
+
+def _run_brief(brief_file: Path, folder: Path) -> None:
+    from modesieve.io.brief import brief_model, brief_settings, read_brief
+    from modesieve.io.progress_display import ProgressDisplay
+    from modesieve.io.report import run_text
+    from modesieve.io.run import run, write_run
+
+    brief, base = read_brief(brief_file), brief_file.resolve().parent
+    model = brief_model(brief, base)
+    with ProgressDisplay() as progress:
+        result = run(model, brief_settings(brief, model, base), progress)
+    write_run(folder, result, brief=brief_file.read_text("utf-8"), report=run_text(result))

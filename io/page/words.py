@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from datetime import date
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
@@ -106,3 +107,49 @@ def _quoted(text: str) -> str:
     return (
         name if name.replace("-", "").replace("_", "").replace(".", "").isalnum() else "'" + name.replace("'", "") + "'"
     )
+
+
+# ---- the same words on paper -----------------------------------------------------------------------------------------
+
+COLUMNS = 108
+
+
+def report_lines(words: Words, comparison: Comparison) -> list[str]:
+    """The texts and tables of a page as lines for a static report; lines that begin with "# " are headings."""
+    lines = [f"# {words.title}", "", *_wrapped(f"{words.headline}: {words.sentence}"), *_wrapped(words.about), ""]
+    lines += ["# Cautions", *(line for text in words.cautions for line in _wrapped(f"- {text}")), ""]
+    lines += ["# Worst error of every pair, share of the pair's own peak", *_pairs(comparison), ""]
+    lines += ["# Modes", *_modes(comparison), ""]
+    lines += ["# Assumptions and certificate"]
+    lines += [line for name, text in words.facts for line in _wrapped(f"{name}: {text}")]
+    return [*lines, "", "# To reproduce", *(line for text in words.commands for line in _wrapped(text))]
+
+
+def _wrapped(text: str) -> list[str]:
+    return textwrap.wrap(" ".join(text.split()), COLUMNS, subsequent_indent="   ") or [""]
+
+
+def _pairs(comparison: Comparison) -> list[str]:
+    origin, share = comparison.modes.origin, comparison.checks[0].pair_peak
+    rows = []
+    for k, output in enumerate(origin.outputs):
+        for l, channel in enumerate(origin.inputs):
+            value = float(share[k, l])
+            size = f"{100 * value:.3g} %" if np.isfinite(value) else "never above the threshold"
+            rows += _wrapped(f"{output.name} from {channel.name}: {size}")
+    return rows
+
+
+def _modes(comparison: Comparison) -> list[str]:
+    modes, kept = comparison.modes, set(comparison.checks[0].small.kept)
+    thermal = modes.origin.kind == "thermal"
+    rows = []
+    for i in range(len(modes)):
+        place = format_quantity(float(modes.time_constant[i]), "s") if thermal else format_frequency(modes.omega[i])
+        damping = (
+            "" if thermal or not np.isfinite(modes.damping_ratio[i]) else f", {100 * modes.damping_ratio[i]:.3g} %"
+        )
+        group = f", cluster {'-'.join(map(str, modes.cluster[i]))}" if modes.cluster[i] else ""
+        why = modes.always_kept[i] or ("kept" if i + 1 in kept else "dropped")
+        rows.append(f"{i + 1:4d}  {place}{damping}{group}: {why}")
+    return rows

@@ -311,3 +311,57 @@ def test_thermal_models_keep_their_uniform_state_in_the_file(tmp_path: Path, fil
     assert loaded.uniform is not None
     np.testing.assert_array_equal(loaded.uniform, thermal().uniform)
     assert isinstance(thermal().modes.model, Thermal)
+
+
+# ---- the bundle ------------------------------------------------------------------------------------------------------
+
+
+@pytest.fixture
+def bundle(tmp_path: Path) -> Path:
+    from modesieve.io.handover.bundle import write_bundle
+
+    folder = tmp_path / "run"
+    folder.mkdir()
+    io.save(folder / "small.h5", thermal())
+    (folder / "page.html").write_text("<html></html>", encoding="utf-8")
+    write_bundle(folder, tmp_path / "out.zip")
+    return tmp_path / "out.zip"
+
+
+def test_a_bundle_carries_the_model_in_open_forms_with_hashes(tmp_path: Path, bundle: Path) -> None:
+    """Manifest, README, state space; unpacking gives the small model back."""
+    import zipfile
+
+    from modesieve.io.handover.bundle import open_bundle
+
+    with zipfile.ZipFile(bundle) as archive:
+        names = set(archive.namelist())
+        archive.extract("state-space.npz", tmp_path)
+    assert {"manifest.json", "README.txt", "small.h5", "state-space.npz", "state-space.json", "page.html"} <= names
+    np.testing.assert_array_equal(read_form(tmp_path / "state-space.npz").arrays["B"], thermal().system.B)
+    (tmp_path / "in").mkdir()
+    small, page = open_bundle(bundle, tmp_path / "in")
+    assert isinstance(io.load(small), ReducedModel)
+    assert page is not None
+
+
+def test_an_altered_bundle_is_refused(tmp_path: Path, bundle: Path) -> None:
+    """A member that was changed, added or leads out of the folder does not match the manifest."""
+    import zipfile
+
+    from modesieve.io.handover.bundle import open_bundle
+
+    for name in ("small.h5", "../evil.txt"):
+        altered = tmp_path / "altered.zip"
+        with zipfile.ZipFile(bundle) as old, zipfile.ZipFile(altered, "w") as new:
+            for member in old.namelist():
+                data = old.read(member)
+                new.writestr(member, data + b" " if member == name else data)
+            if name not in old.namelist():
+                new.writestr(name, b"x")
+        with pytest.raises(FileError, match="manifest"):
+            open_bundle(altered, tmp_path)
+    assert not (tmp_path.parent / "evil.txt").exists()
+    (tmp_path / "no.zip").write_bytes(b"PK\x03\x04 nothing")
+    with pytest.raises(FileError, match="bundle"):
+        open_bundle(tmp_path / "no.zip", tmp_path)
