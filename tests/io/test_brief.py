@@ -6,8 +6,8 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from modesieve import io
-from modesieve.examples import chain, ladder
+from modesieve import examples, io
+from modesieve.examples import chain, cold_plate, ladder, mast
 from modesieve.io.brief import brief_from, brief_model, brief_settings, read_brief
 from modesieve.io.brief_text import brief_text, hertz_text, relocated, time_text
 from modesieve.io.settings import Settings
@@ -385,3 +385,16 @@ def test_suggested_briefs_run(model, tmp_path):
     if isinstance(again.choice, Tolerance):
         assert error is not None
         assert error.value <= again.choice.value
+
+
+@pytest.mark.parametrize(("name", "demo"), [("mast", mast()), ("cold_plate", cold_plate())])
+def test_ready_briefs_say_what_the_demos_do(name, demo):
+    """The briefs in the examples mean the demos' own settings."""
+    from modesieve.io.commands.demo import settings_of
+
+    brief = read_brief(Path(examples.__file__).parent / f"{name}.toml")
+    found = brief_settings(brief, demo.model, Path())
+    wanted = settings_of(demo)
+    assert found.band == pytest.approx(wanted.band, rel=1e-11)
+    assert found.choice.value == pytest.approx(wanted.choice.value)
+    assert (found.choice.of, found.statics, found.levels) == (wanted.choice.of, wanted.statics, wanted.levels)
