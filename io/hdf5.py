@@ -202,7 +202,7 @@ def attribute(source: Source, node: Node, name: str) -> Any:
     if shape is None or np.prod([int(s) for s in shape], dtype=object) * dtype.itemsize > 1 << 20:
         raise FileError("the attribute has the wrong size", expected="a value", got=f"shape {shape}", where=where)
     if dtype.kind == "O":
-        source.heap.check(where)
+        _check_text(source, handle, where)
     with reading(where):
         value = node.attrs[name]
     if content == "text":
@@ -211,6 +211,15 @@ def attribute(source: Source, node: Node, name: str) -> Any:
             raise FileError("the attribute is a list", expected="one text", got=f"{len(items)} texts", where=where)
         return decoded(items[0], where, 1 << 20)
     return np.asarray(value)
+
+
+def _check_text(source: Source, handle: Any, where: str) -> None:
+    source.heap.check(where)
+    with reading(where):
+        shared = handle.get_type().committed()
+    if shared:  # its references cannot be told from other bytes of the file
+        expected = "a text with a type of its own"
+        raise FileError("the attribute's type lies elsewhere", expected=expected, got="a named type", where=where)
 
 
 def text_attribute(source: Source, node: Node, name: str, default: str = "") -> str:

@@ -314,6 +314,77 @@ def test_reference_attributes(path):
     refused(path, "the dataset holds no plain numbers")
 
 
+def test_attributes_with_named_types(path):
+    """A text attribute whose type stands elsewhere in the file is refused."""
+    write(path)
+    with h5py.File(path, "a") as file:
+        file["type"] = h5py.string_dtype()
+        file.attrs.create("title", "x", dtype=file["type"])
+    refused(path, "the attribute's type lies elsewhere")
+
+
+def reference_length(path, text):
+    """Where the file keeps the length of the only variable-length text equal to ``text``: 4 bytes before its heap."""
+    raw = path.read_bytes()
+    heap = raw.index(b"GCOL")
+    needle = len(text).to_bytes(4, "little") + heap.to_bytes(8, "little")
+    assert raw.count(needle) == 1
+    return raw.index(needle)
+
+
+@pytest.mark.parametrize("latest", [False, True])
+def test_impossible_lengths_of_texts(path, latest):
+    """A reference that claims gigabytes of text is refused before the library clears that much memory."""
+    with h5py.File(path, "w", libver="latest" if latest else None) as file:
+        file.attrs["kind"] = "structure"
+        file["stiffness"], file["mass"] = np.eye(2), np.eye(2)
+        file.attrs["title"] = "a title of just this length"
+    at = reference_length(path, "a title of just this length")
+    raw = bytearray(path.read_bytes())
+    raw[at : at + 4] = b"\xf0\xff\xff\x7f"
+    path.write_bytes(raw)
+    refused(path, "metadata checksum" if latest else "the file's texts are damaged")
+
+
+@pytest.mark.parametrize("size", [0, 2**64 - 8])
+def test_heaps_that_never_end(path, size):
+    """A heap object without length, or with one that wraps around, is refused; the library would walk it forever."""
+    write(path)
+    raw = bytearray(path.read_bytes())
+    first = raw.index(b"GCOL") + 16
+    raw[first : first + 2] = (0 if size == 0 else 1).to_bytes(2, "little")
+    raw[first + 8 : first + 16] = size.to_bytes(8, "little")
+    path.write_bytes(raw)
+    refused(path, "the file's texts are damaged")
+
+
+def test_compressed_texts(path):
+    """Variable-length texts under compression are refused with the remedy."""
+
+    def packed(file):
+        file.create_dataset("inputs/name", data=["a", "b"], dtype=h5py.string_dtype(), chunks=(2,), compression="gzip")
+
+    write(path, load=np.eye(2), names=packed)
+    assert refused(path, "stored in a way that is not read").remedy == "store the texts without compression"
+
+
+@pytest.mark.parametrize("latest", [False, True])
+@pytest.mark.parametrize("userblock", [0, 512])
+def test_honest_texts_of_every_layout(path, latest, userblock):
+    """Texts in attributes, in one piece and in chunks are read from old and new file versions, user blocks included."""
+    with h5py.File(path, "w", libver="latest" if latest else None, userblock_size=userblock) as file:
+        file.attrs["kind"] = "structure"
+        for i in range(12):  # enough for the dense storage of new versions
+            file.attrs[f"note {i}"] = "ü" * i
+        file["stiffness"], file["mass"], file["load"] = np.eye(3), np.eye(3), np.eye(3)
+        file["inputs/name"] = ["a", "bé", "c"]
+        file.create_dataset("unknowns/node", data=["1", "2", "3"], dtype=h5py.string_dtype(), maxshape=(None,))
+        file.create_dataset("unknowns/direction", data=["x", "y", "z"], dtype=h5py.string_dtype(), chunks=(2,))
+    model = io.load(path)
+    assert [c.name for c in model.inputs] == ["a", "bé", "c"]
+    assert (model.unknowns.node, model.unknowns.direction) == (("1", "2", "3"), ("x", "y", "z"))
+
+
 def test_shared_texts_cannot_multiply(path):
     """A label of variable length that is longer than any label is refused at the first few read."""
 
