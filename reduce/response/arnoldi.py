@@ -23,6 +23,8 @@ from modesieve.reduce.arrays import Complex, Real
 
 #: Columns that shrink to this share under orthogonalisation are rounding and are left out.
 ROUNDING = 1e-13
+#: Columns that shrink to this share are orthogonalised once more after they are normalised.
+CAREFUL = 1e-3
 #: Frequencies whose small problems are solved at once.
 PIECE = 64
 
@@ -166,9 +168,10 @@ class KrylovResponse:
         W, H = W - V @ more, H + more
         Q, R, pivots = sl.qr(W, mode="economic", pivoting=True, check_finite=False)
         order = np.argsort(pivots)
-        real = np.linalg.norm(R / np.where(size > 0, size, 1.0)[pivots], axis=1) > ROUNDING
+        left = np.linalg.norm(R / np.where(size > 0, size, 1.0)[pivots], axis=1)
+        real = left > ROUNDING
         Q, R = Q[:, real], R[np.ix_(real, order)]
-        if Q.shape[1]:
+        if np.any(left[real] < CAREFUL):
             Q, R, H = _clean(V, Q, R, H)
         return H, Q, R
 
