@@ -142,12 +142,25 @@ def simulate(small: Path, inputs: Path, hold: Any, start: str, save_state: Path 
     if save_state is not None:
         _save_state(save_state, model, result.state)
     columns = {c.name: result.y[:, k] for k, c in enumerate(origin.outputs)}
+    columns |= error_columns(model, start, given.u)
     write_outputs(output, given.t, columns)
     for line in _remarks(model, given.t, given.u):
         click.echo(f"note: {line}")
     span = float(given.t[-1] - given.t[0])
     click.echo(f"{len(given.t)} rows over {span:.4g} s in {spent:.3g} s: {span / max(spent, 1e-9):.3g} times real time")
     click.echo(f"wrote {output}")
+
+
+def error_columns(model: ReducedModel, start: str, u: Any) -> dict[str, Any]:
+    """Guaranteed largest error of every output over all time, as columns: thermal, from rest, within the amplitudes."""
+    from modesieve.reduce.truncation.time_bound import worst_error
+
+    origin, guarantee = model.modes.origin, model.guarantee
+    known = model.hub is not None and guarantee is not None and guarantee.holds and origin.kind == "thermal"
+    if not known or start != "rest" or np.any(np.abs(u) > origin.amplitudes * (1 + 1e-9)):
+        return {}
+    worst = worst_error(model.hub, model.system).worst  # type: ignore[arg-type]
+    return {f"{c.name} error at most": np.full(len(u), worst[k]) for k, c in enumerate(origin.outputs)}
 
 
 def start_state(model: ReducedModel, start: str, first: Any) -> Any:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any, Literal, TypeAlias
 
 import numpy as np
@@ -73,14 +73,28 @@ def discrete_form(small: ReducedModel, dt: float, hold: Hold = "zero", delay: fl
 
 
 def sampled(small: ReducedModel) -> SmallSystem:
-    """The system that may be sampled: pseudo-modes of tail levels are no motions and would fold into the band."""
-    return small.system
+    """The system that may be sampled: a structure's pseudo-modes are no motions and would fold into the band.
+
+    They are replaced by their static answer as feedthrough; of velocity and acceleration outputs they have none.
+    """
+    system, kept = small.system, len({int(small.modes.term[n - 1]) for n in small.kept})
+    if small.statics != "vectors" or not isinstance(system, SecondOrderModal) or system.terms == kept:
+        return system
+    tail = np.arange(kept, system.terms)
+    static = (system.cq[:, tail] / system.x[tail]) @ system.b[tail]
+    return replace(system.select(np.arange(kept)), X=system.X + static)
 
 
 def sampling_notes(small: ReducedModel, dt: float) -> list[str]:
     """What sampling does to the poles, and what it does to the certainty of the error."""
     notes = []
-    for f in folded_poles(small.system, dt, small.band):
+    system = sampled(small)
+    if system is not small.system:
+        lost = system.terms
+        notes.append(f"{small.system.terms - lost} pseudo-modes became feedthrough: as motions they would fold")
+        if np.any(system.cv) or np.any(system.ca):
+            notes.append("velocity and acceleration outputs lose what their pseudo-modes added")
+    for f in folded_poles(system, dt, small.band):
         where = ", in the band: choose a shorter sample time or filter the input" if f.in_band else ""
         notes.append(
             f"a pole at {f.hz:.4g} Hz is past the Nyquist frequency and appears at {f.appears_hz:.4g} Hz{where}"

@@ -107,7 +107,7 @@ def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Wor
         "delivered": check_data(check),
         "tolerance": _tolerance(small.choice),
         "sweep": None if comparison.sweep is None else sweep_data(comparison.sweep),
-        "step": time_data(comparison.step),
+        "step": time_data(comparison.step, small),
         "shapes": shape_data(modes),
         "hub": hub_data(small, full.omega),
         "spot_checks": spot_data(small),

@@ -106,7 +106,7 @@ const Charts = (() => {
     const c = palette(), line = (y, name, color, width, dash) => ({ type: "scatter", mode: "lines", name, x: v.t, y, line: { color, width, dash }, hovertemplate: `%{x:.4g} ${plain(v.tUnit)}<br>%{y:.4g} ${plain(v.unit)}<extra>${plain(name)}</extra>` });
     const traces = [line(v.full, `full, ${v.certainty}`, c.ink, 2.2, v.certainty === "estimated" ? "dash" : "solid"), line(v.small, v.name, v.color(c), 1.6, "dash")];
     if (v.band) {
-      const edge = (sign) => v.small.map((y) => y + sign * v.band);
+      const edge = (sign) => v.small.map((y, i) => y + sign * v.band[i]);
       traces.unshift({ type: "scatter", mode: "lines", x: v.t, y: edge(1), line: { width: 0 }, showlegend: false, hoverinfo: "skip" },
         { type: "scatter", mode: "lines", name: "guaranteed band", x: v.t, y: edge(-1), fill: "tonexty", fillcolor: fade(c.purple), line: { width: 0 }, hoverinfo: "skip" });
     }

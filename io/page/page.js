@@ -147,11 +147,11 @@ const modesieve = (() => {
   }
   function drawTime() {
     if (!data.step) { $("time").classList.add("hidden"); return; }
-    const e = state.pair ?? worstPair(), row = Math.floor(e / m), col = e % m, t = Numbers.array(data.step.t), all = Numbers.array(data.step.full);
+    const e = state.pair ?? worstPair(), row = Math.floor(e / m), col = e % m, t = Numbers.array(data.step.t), all = Numbers.array(data.step.full), bound = Numbers.array(data.step.bound);
     const [f, unit] = t[t.length - 1] > 7200 ? [3600, "h"] : t[t.length - 1] > 300 ? [60, "min"] : [1, "s"], small = Array.from(trial.step(row, col, t));
     $("time-note").textContent = `${data.outputs[row].name} after a step of ${data.inputs[col].name}, ${C.engineering(data.amplitudes[col], data.inputs[col].unit)}`;
     C.time("time-chart", { t: Array.from(t, (v) => v / f), tUnit: unit, full: Array.from(t, (_, i) => all[i * p * m + e]), small, certainty: data.step.certainty, name: smallName(), color: smallColor,
-      unit: data.outputs[row].unit, yTitle: `${C.plain(data.outputs[row].name)}${data.outputs[row].unit ? `, ${C.plain(data.outputs[row].unit)}` : ""}`, band: trial.isDelivered() && data.step.bound ? data.step.bound[e] : null });
+      unit: data.outputs[row].unit, yTitle: `${C.plain(data.outputs[row].name)}${data.outputs[row].unit ? `, ${C.plain(data.outputs[row].unit)}` : ""}`, band: trial.isDelivered() && data.step.bound ? Array.from(t, (_, i) => bound[i * p * m + e]) : null });
   }
   const worstPair = () => state.result.pairs.reduce((top, o, e, list) => (o.share > list[top].share && Number.isFinite(o.share) ? e : top), 0);
 

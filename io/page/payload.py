@@ -25,6 +25,7 @@ from modesieve.reduce.model import (
 from modesieve.reduce.response.records import ErrorFigure
 from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal, SmallSystem
 from modesieve.reduce.truncation.records import ReducedModel
+from modesieve.reduce.truncation.time_bound import step_error
 
 #: Mode shapes are left out of the page past this many numbers (4 bytes each before encoding).
 SHAPE_LIMIT = 600_000
@@ -181,11 +182,26 @@ def check_data(check: Check) -> dict[str, Any]:
     }
 
 
-def time_data(step: TimeResponse | None) -> dict[str, Any] | None:
-    """The stored full curve; the small model's is computed in the browser."""
+def time_data(step: TimeResponse | None, small: ReducedModel) -> dict[str, Any] | None:
+    """The stored full curve; the small model's is computed in the browser. bound: guaranteed, thermal models only."""
     if step is None:
         return None
-    return {"t": packed(step.t), "full": packed(step.full), "certainty": step.certainty, "note": step.note}
+    bound = _step_bound(step, small)
+    return {
+        "t": packed(step.t),
+        "full": packed(step.full),
+        "certainty": step.certainty,
+        "note": step.note,
+        "bound": None if bound is None else packed(bound),
+    }
+
+
+def _step_bound(step: TimeResponse, small: ReducedModel) -> Real | None:
+    """Guaranteed error (t, p, m) of the step responses, inputs at their amplitudes."""
+    hub, guarantee = small.hub, small.guarantee
+    if hub is None or guarantee is None or not guarantee.holds or small.modes.origin.kind != "thermal":
+        return None
+    return step_error(hub, small.system, step.t) * small.modes.origin.amplitudes
 
 
 def shape_data(modes: Modes) -> dict[str, Any] | None:

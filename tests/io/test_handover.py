@@ -365,3 +365,38 @@ def test_an_altered_bundle_is_refused(tmp_path: Path, bundle: Path) -> None:
     (tmp_path / "no.zip").write_bytes(b"PK\x03\x04 nothing")
     with pytest.raises(FileError, match="bundle"):
         open_bundle(tmp_path / "no.zip", tmp_path)
+
+
+def test_pseudo_modes_are_not_sampled(tmp_path: Path) -> None:
+    """A structure's tail levels become feedthrough in the discrete form, its statics stay exact, and it says so."""
+    from modesieve.io.handover.forms import sampled
+
+    model = chain(30, damping=Damping(base=ModalRatio(ratio=0.02)))
+    ranking = rank(find_modes(model, BAND), band=BAND)
+    small = truncate(ranking, Count(modes=6), statics="vectors", band=BAND)
+    assert small.system.terms > 6
+    assert sampled(small).terms == 6
+    rest = np.zeros(1)
+    np.testing.assert_allclose(sampled(small).response(rest), small.response(rest), rtol=1e-10)
+    form = discrete_form(small, 0.5)
+    assert any("pseudo-modes became feedthrough" in note for note in form.about["notes"])
+
+
+def test_thermal_histories_carry_their_guaranteed_error(tmp_path: Path) -> None:
+    """From rest, within the stated amplitudes, every output has its worst error beside it, and it holds."""
+    from modesieve.reduce.truncation.promise import with_guarantee
+
+    model = ladder(200)
+    band = (1e-5, 0.02)
+    small = with_guarantee(truncate(rank(find_modes(model, count=12), band=band), Count(modes=4), band=band))
+    assert small.guarantee is not None
+    assert small.guarantee.holds, small.guarantee.reason
+    io.save(tmp_path / "small.h5", small)
+    t = np.linspace(0.0, 20_000.0, 41)
+    (tmp_path / "in.csv").write_text("time,source\n" + "\n".join(f"{v},1" for v in t), encoding="utf-8")
+    call(simulate, tmp_path / "small.h5", tmp_path / "in.csv", "-o", tmp_path / "out.csv")
+    header = (tmp_path / "out.csv").read_text("utf-8").splitlines()[0]
+    assert header == "time,far,far error at most"
+    out = np.loadtxt(tmp_path / "out.csv", delimiter=",", skiprows=1)
+    exact = run(find_modes(model).system, t, np.ones((41, 1))).y[:, 0]
+    assert np.all(np.abs(out[:, 1] - exact) <= out[:, 2] * (1 + 1e-9))
