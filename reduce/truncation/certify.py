@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -10,6 +10,7 @@ import numpy as np
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.errors import ChoiceError, ModesieveError
 from modesieve.reduce.modal.records import Modes
+from modesieve.reduce.model import Interface
 from modesieve.reduce.progress import Listener, tell
 from modesieve.reduce.response.norms import largest_singular_value
 from modesieve.reduce.response.records import ErrorFigure, FullResponse
@@ -60,7 +61,7 @@ def certify(
     tell(progress, "guarantee", message="worst error over the band")
     grid = grid_of(hub, small, band)
     promise = _curve(modes, hub, small, band, grid)
-    promise = _figures(promise, hub, small, grid, threshold, pairs)
+    promise = _figures(promise, modes.origin, hub, small, grid, threshold, pairs)
     if spots or full is not None:
         tell(progress, "guarantee", message="spot checks")
         promise = _spotted(promise, modes, hub, small, kept, full, solve, spots)
@@ -140,7 +141,13 @@ def _below(size: Real, own: Real) -> Real:
 
 
 def _figures(
-    promise: Guarantee, hub: Hub, small: SmallSystem, grid: Real, threshold: float | None, pairs: bool
+    promise: Guarantee,
+    channels: Interface,
+    hub: Hub,
+    small: SmallSystem,
+    grid: Real,
+    threshold: float | None,
+    pairs: bool,
 ) -> Guarantee:
     """Worst figures between the samples too; withdrawn where no supremum exists."""
     reason = _no_supremum(hub, small, promise.band)
@@ -153,11 +160,12 @@ def _figures(
     error, *rest = suprema(lambda l, r: gap.relative(l, r, threshold=threshold), grid)
     local = rest[0] if rest else None
     absolute = suprema(gap.per_output, grid) if hub.direct.size else ()
+    name = _Namer(channels=channels, hub=hub, small=small)
     return replace(
         promise,
-        peak=_figure(error, peak, "peak") if peak > 0 else None,
-        local=None if local is None else _figure(local, 1.0, "local", threshold=threshold),
-        absolute=tuple(_absolute(s, hub, k) for k, s in enumerate(absolute)),
+        peak=_figure(error, peak, "peak", name) if peak > 0 else None,
+        local=None if local is None else _figure(local, 1.0, "local", name, threshold=threshold),
+        absolute=tuple(_absolute(s, k, name) for k, s in enumerate(absolute)),
         pair_peak=_pairs(gap, hub, grid) if pairs and hub.direct.size else None,
         peak_reference=peak,
         threshold=threshold,
@@ -184,21 +192,42 @@ def _threshold(hub: Hub, peak: float) -> float:
     return 1.0 if np.any(hub.resolutions != 1.0) else _FLOOR * peak
 
 
-def _figure(found: Supremum, reference: float, to: Any, threshold: float | None = None) -> ErrorFigure:
+@dataclass(frozen=True, kw_only=True, eq=False)
+class _Namer:
+    """Names the pair that errs most at a frequency, among all or of one output."""
+
+    channels: Interface
+    hub: Hub
+    small: SmallSystem
+
+    def pair(self, omega: float, output: int | None = None) -> tuple[str, str] | None:
+        w = np.array([omega])
+        gap = np.abs(self.hub.response(w) - self.small.response(w)) + self.hub.entry_error(w)
+        size = np.nan_to_num(np.abs(self.hub.weigh(gap))[0], nan=0.0)
+        if size.size == 0:
+            return None
+        k = int(np.argmax(size.max(axis=1))) if output is None else output
+        return self.channels.inputs[int(np.argmax(size[k]))].name, self.channels.outputs[k].name
+
+
+def _figure(found: Supremum, reference: float, to: Any, name: _Namer, threshold: float | None = None) -> ErrorFigure:
     return ErrorFigure(
         value=found.value / reference,
         certainty="guaranteed",
         relative_to=to,
+        pair=name.pair(found.at_omega),
         at_omega=found.at_omega,
         threshold=threshold,
     )
 
 
-def _absolute(found: Supremum, hub: Hub, k: int) -> ErrorFigure:
+def _absolute(found: Supremum, k: int, name: _Namer) -> ErrorFigure:
     return ErrorFigure(
-        value=found.value * float(hub.resolutions[k]),
+        value=found.value * float(name.hub.resolutions[k]),
         certainty="guaranteed",
         relative_to="absolute",
+        unit=name.channels.outputs[k].unit,
+        pair=name.pair(found.at_omega, k),
         at_omega=found.at_omega,
     )
 

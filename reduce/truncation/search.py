@@ -79,7 +79,7 @@ def smallest_guaranteed(
     options = _options(hub, statics, levels)
     everything = tuple(range(1, len(modes) + 1))
     finest = small_system(hub, everything, options[-1])
-    whole = certify(modes, finest, band, hub=hub, kept=everything, solve=solve, spots=spots, pairs=False)
+    whole = certify(modes, finest, band, hub=hub, kept=everything, spots=0, pairs=False)
     if not whole.holds:
         raise ChoiceError("no guaranteed choice here", expected="a guarantee for all computed modes", got=whole.reason)
     trial = _trial(hub, finest, whole, tolerance.of, outputs)

@@ -75,7 +75,7 @@ def cutter(modes: Modes, statics: str, levels: int) -> Cutter:
     if statics == "vectors":
         from modesieve.reduce.truncation.build import build_hub
 
-        return Cutter(modes=modes, statics=statics, hub=build_hub(modes, levels), levels=levels)
+        return Cutter(modes=modes, statics=statics, hub=build_hub(modes), levels=levels)  # three levels bound any fewer
     return Cutter(modes=modes, statics=statics, parts=static_terms(modes) if statics == "feedthrough" else None)
 
 
