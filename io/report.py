@@ -7,6 +7,7 @@ from typing import Any
 
 from rich.console import Console
 
+from modesieve.io.modes_tables import modes_head, modes_table
 from modesieve.io.run import Result
 from modesieve.io.tables import (
     cautions_report,
@@ -14,8 +15,6 @@ from modesieve.io.tables import (
     comparison_head,
     first_kept,
     guarantee_words,
-    modes_head,
-    modes_table,
     outputs_table,
     pairs_table,
     sweep_table,

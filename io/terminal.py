@@ -5,12 +5,15 @@ from __future__ import annotations
 import re
 import sys
 from collections.abc import Iterable, Sequence
-from typing import IO, Any
+from typing import IO, Any, TypeAlias
 
 import numpy as np
 from rich.console import Console, Group, RenderableType
 from rich.table import Table
 from rich.text import Text
+
+#: Header and cells.
+Column: TypeAlias = tuple[str, Sequence[str]]
 
 WIDTH = 100
 _EIGHTHS = " ▏▎▍▌▋▊▉█"
@@ -105,7 +108,7 @@ def on_point(cells: Sequence[str]) -> list[str]:
 
 def table(
     console: Console,
-    columns: Sequence[tuple[str, Sequence[str]]],
+    columns: Sequence[Column],
     title: str = "",
     *,
     left: Iterable[int] = (0,),

@@ -14,14 +14,7 @@ from modesieve.io.commands.options import FILE, band_option, json_option, model_
 from modesieve.io.json_output import comparison_object, dumps
 from modesieve.io.progress_display import ProgressDisplay
 from modesieve.io.run import Written, write_figures
-from modesieve.io.tables import (
-    checks_table,
-    comparison_head,
-    first_kept,
-    outputs_table,
-    sweep_table,
-    written_table,
-)
+from modesieve.io.tables import checks_table, comparison_head, first_kept, outputs_table, sweep_table, written_table
 from modesieve.io.terminal import bullets, screen, show
 from modesieve.io.verdict import Verdict, verdict_of
 from modesieve.reduce.comparison.compare import compare as hold

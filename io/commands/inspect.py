@@ -9,8 +9,10 @@ from rich.console import Console, RenderableType
 
 from modesieve.io import load
 from modesieve.io.commands.options import FILE, json_option
+from modesieve.io.facts_tables import facts_report
 from modesieve.io.json_output import Object, dumps, facts_object, modes_file_object, reduced_file_object
-from modesieve.io.tables import certificate_words, facts_report, origin_words, reduced_report
+from modesieve.io.modes_tables import certificate_words, origin_words
+from modesieve.io.tables import reduced_report
 from modesieve.io.terminal import bullets, labelled, screen, show
 from modesieve.io.wording import format_number
 from modesieve.reduce.inspection import Facts, inspect_model

@@ -11,8 +11,8 @@ from modesieve.io import load_model, save
 from modesieve.io.choices import band_of
 from modesieve.io.commands.options import FILE, band_option, by_option, json_option, model_argument, writable
 from modesieve.io.json_output import dumps, modes_object
+from modesieve.io.modes_tables import effective_mass_table, modes_head, modes_table
 from modesieve.io.progress_display import ProgressDisplay
-from modesieve.io.tables import effective_mass_table, modes_head, modes_table
 from modesieve.io.terminal import bullets, screen, show
 from modesieve.reduce.modal.find import find_modes
 from modesieve.reduce.modal.rank import MEASURES, rank, unknown_measure

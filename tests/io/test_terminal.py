@@ -10,11 +10,12 @@ from rich.console import Console
 
 from modesieve.examples import chain, ladder
 from modesieve.io.json_output import dumps, held
+from modesieve.io.modes_tables import cluster_rows, effective_mass_table, modes_table
 from modesieve.io.progress_display import ProgressDisplay
 from modesieve.io.report import run_report, run_text
 from modesieve.io.run import run
 from modesieve.io.settings import Settings
-from modesieve.io.tables import cluster_rows, effective_mass_table, modes_table, sweep_table
+from modesieve.io.tables import sweep_table
 from modesieve.io.terminal import bar, clean, on_point, screen, show, table
 from modesieve.io.verdict import band_end, cautions, leading, verdict_of
 from modesieve.reduce.modal.find import find_modes
@@ -181,7 +182,9 @@ def test_verdict_names_numbers_and_certainty(result):
     """Kept, computed, unknowns, the error with its reference, and how it is known."""
     sentence = result.verdict.sentence
     kept = len(result.reduced.kept)
-    assert sentence.startswith(f"{kept} of {len(result.modes)} computed modes are kept: {2 * kept} states in place of 30")
+    assert sentence.startswith(
+        f"{kept} of {len(result.modes)} computed modes are kept: {2 * kept} states in place of 30"
+    )
     assert "of the response at the same frequency" in sentence
     assert "at every frequency from 0 Hz to 4 Hz, guaranteed" in sentence
 
