@@ -145,6 +145,16 @@ def test_modes_of_another_model_are_refused(path):
     )
 
 
+def test_another_kind_of_file(path):
+    """A modes file is no reduced model and no model, and says what it is."""
+    io.save(path, modes_of("ratio"))
+    with pytest.raises(FileError) as caught:
+        io.load_reduced(path)
+    assert (caught.value.expected, caught.value.got) == ('format = "modesieve reduced model"', "'modesieve modes'")
+    with pytest.raises(FileError, match="this is not a model file"):
+        io.load_model(path)
+
+
 # ---- reduced models ------------------------------------------------------------------------------------------------
 
 
@@ -156,6 +166,7 @@ def test_reduced_round_trip(path, name, assert_same_record):
     back = io.load(path)
     assert isinstance(back, ReducedModel)
     assert_same_record(back, small)
+    assert_same_record(io.load_reduced(path), small)
     assert back.modes.model is None
     assert back.modes.vectors is None
     assert np.array_equal(back.modes.system.response(OMEGA), small.modes.system.response(OMEGA))
