@@ -110,7 +110,9 @@ const Charts = (() => {
       traces.unshift({ type: "scatter", mode: "lines", x: v.t, y: edge(1), line: { width: 0 }, showlegend: false, hoverinfo: "skip" },
         { type: "scatter", mode: "lines", name: "guaranteed band", x: v.t, y: edge(-1), fill: "tonexty", fillcolor: fade(c.purple), line: { width: 0 }, hoverinfo: "skip" });
     }
-    draw(id, traces, layout(c, { xaxis: axis(c, `time, ${v.tUnit}`), yaxis: axis(c, v.yTitle) }));
+    // The curves set the scale: the band is wide in the first instant, where the tail has not yet answered.
+    const seen = [...v.full, ...v.small].filter(Number.isFinite), low = Math.min(...seen), high = Math.max(...seen), room = 0.08 * (high - low || 1);
+    draw(id, traces, layout(c, { xaxis: axis(c, `time, ${v.tUnit}`), yaxis: axis(c, v.yTitle, { range: [low - room, high + room] }) }));
   }
 
   // ---- poles and coupling -------------------------------------------------------------------------------------------

@@ -27,10 +27,15 @@ def page_words(comparison: Comparison, check: Check, *, commands: tuple[str, ...
         headline=verdict.headline,
         sentence=verdict.sentence,
         about=". ".join(part for part in (about, note) if part) + ".",
-        cautions=(*verdict.cautions, *readiness(check.small).warnings),
+        cautions=(*verdict.cautions, *_control(check)),
         facts=tuple(_facts(comparison, check)),
         commands=commands,
     )
+
+
+def _control(check: Check) -> tuple[str, ...]:
+    """What a control engineer must know; a thermal surrogate is not closed a loop around."""
+    return () if check.small.modes.origin.kind == "thermal" else readiness(check.small).warnings
 
 
 def _facts(comparison: Comparison, check: Check) -> list[tuple[str, str]]:
