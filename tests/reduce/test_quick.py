@@ -6,6 +6,7 @@ from brute_force import off_grid, random_case
 
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.response.norms import largest_singular_value
+from modesieve.reduce.truncation.bound_sweep import bound_sweep
 from modesieve.reduce.truncation.build import build_hub
 from modesieve.reduce.truncation.quick import computed_gap, output_energies, quick_error, rest_bound, static_factor
 from modesieve.reduce.truncation.tails import with_static_remainder, with_tail_levels
@@ -99,3 +100,24 @@ def test_static_remainder_of_rates_is_refused():
     hub = build_hub(case.modes, 1, shifted=case.shifted)
     with pytest.raises(ChoiceError, match="static remainder"):
         quick_error(hub, (1,), np.array([0.1]), static=True)
+
+
+def test_sweep_of_guaranteed_errors():
+    """Every count and statics: the guaranteed error covers the exact one, levels help, the floor is whole-axis."""
+    case = random_case(0, "thermal")
+    hub = build_hub(case.modes, 2, shifted=case.shifted)
+    band = (1e-3 * case.omega_c, 0.6 * case.omega_c)
+    order = np.arange(1, len(case.modes) + 1)
+    sweep = bound_sweep(hub, order, band, of="peak")
+    assert set(sweep.errors) == {"none", "feedthrough", "vectors 1", "vectors 2"}
+    w = np.geomspace(*band, 300)
+    G = case.response(w)
+    size = largest_singular_value(G).max()
+    for i, count in enumerate(sweep.kept):
+        small = with_tail_levels(hub, tuple(range(1, int(count) + 1)), 0).system
+        exact = largest_singular_value(G - small.response(w)).max() / size
+        assert exact <= sweep.errors["none"][i] * (1 + 1e-3)
+    assert sweep.errors["vectors 1"][-1] < sweep.errors["none"][-1]
+    assert len(sweep.floor.floor) == hub.system.states + 1
+    with pytest.raises(ChoiceError, match="peak or local"):
+        bound_sweep(hub, order, band, of="absolute")
