@@ -48,6 +48,7 @@ _CHOICES = "--keep, --tolerance, --keep-list or --above (or --band alone: every 
 @click.option("--keep-list", type=FILE, metavar="FILE", help="Keep the modes that a TOML file lists.")
 @click.option("--above", multiple=True, metavar="MEASURE=SHARE", help="Keep modes above a share; may repeat.")
 @click.option("--statics", type=click.Choice(["none", "feedthrough", "vectors"]), help="What stands for the rest.")
+@click.option("--levels", type=click.IntRange(1, 3), default=2, show_default=True, help="Tail levels of vectors.")
 @click.option("-o", "output", type=FILE, required=True, metavar="SMALL.h5", help="The small model's file.")
 @json_option
 def truncate(
@@ -61,6 +62,7 @@ def truncate(
     keep_list: Path | None,
     above: tuple[str, ...],
     statics: Any,
+    levels: int,
     output: Path,
     as_json: bool,
 ) -> None:
@@ -80,7 +82,8 @@ def truncate(
     choice = _choice(model, keep, tolerance, of, keep_list, above, around)
     with ProgressDisplay() as progress:
         found = _modes(model, modes_file, choice, around, progress)
-        small = cut(_ranked(found, choice, by, around), choice, statics=statics, band=around, progress=progress)
+        table = _ranked(found, choice, by, around)
+        small = cut(table, choice, statics=statics, levels=levels, band=around, progress=progress)
         small = with_guarantee(small, progress)
     save(output, small)
     if as_json:

@@ -207,6 +207,14 @@ def test_truncate_by_thresholds_and_by_band(done, chain_file):
     assert sorted({*slow, *big}) == both
 
 
+def test_tail_levels_add_states_and_take_error_away(done, chain_file):
+    """--statics vectors adds pseudo-modes; the second level brings the error down further."""
+    arguments = ("--band", "0Hz", "4Hz", "--keep", 9, "--statics", "vectors", "-o", "s.h5", "--json")
+    one, two = (json.loads(done("truncate", chain_file, *arguments, "--levels", levels)) for levels in (1, 2))
+    assert 18 < one["states"] < two["states"]
+    assert two["error"]["value"] < one["error"]["value"]
+
+
 def test_keep_list_goes_round(done, chain_file, here):
     """A keep list from the command line's own folder chooses the same modes again."""
     (here / "keep.toml").write_text("keep = [2, 5]\n")
