@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -198,6 +198,7 @@ def cautions(comparison: Comparison, check: Check) -> list[str]:
         *_certificate(modes),
         *_reach(modes, comparison.band),
         *_no_proof(comparison, small),
+        *_missed(figure, small),
     ]
     out += [*_local(check, figure), *_phase(check)]
     out += [f"{text}" for text in (*modes.warnings, *comparison.warnings)]
@@ -210,6 +211,18 @@ def _estimate_only(figure: ErrorFigure) -> list[str]:
     if figure.certainty != "estimated":
         return []
     return ["the error is only estimated: nothing bounds it, and it was not measured against the full model"]
+
+
+def _missed(figure: ErrorFigure, small: ReducedModel) -> list[str]:
+    """The tolerance was met by the measured error, which the leading figure may exceed."""
+    choice = small.choice
+    if not isinstance(choice, Tolerance) or figure.relative_to != choice.of or not figure.value > choice.value:
+        return []
+    asked = replace(figure, value=choice.value)
+    return [
+        f"the {figure.certainty} error of {figure_size(figure)} lies above the tolerance of {figure_size(asked)}: "
+        "ask for a tighter one, or keep more modes"
+    ]
 
 
 def _no_proof(comparison: Comparison, small: ReducedModel) -> list[str]:

@@ -244,6 +244,15 @@ def test_the_leading_figure_is_the_one_asked_for(result):
     assert leading(comparison, replace(check, small=absolute)).unit == "m"
 
 
+def test_a_missed_tolerance_is_told(result):
+    """Where the guaranteed error exceeds the tolerance that the measured one met, a caution says so."""
+    comparison, check = result.comparison, result.comparison.checks[0]
+    assert not any("above the tolerance" in text for text in cautions(comparison, check))
+    value = leading(comparison, check).value
+    tight = replace(check, small=replace(check.small, choice=Tolerance(value=0.99 * value)))
+    assert any("above the tolerance" in text for text in cautions(comparison, tight))
+
+
 def test_guarantees_speak_only_for_their_own_band_and_model(result):
     """Beyond its band, or for another full model, the measured figure leads and a caution says why."""
     comparison, check = result.comparison, result.comparison.checks[0]
