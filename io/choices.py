@@ -64,7 +64,7 @@ def _output_unit(given: str, channels: Interface, text: str, where: str) -> str:
     )
 
 
-def above_of(name: str, value: str | float, where: str = "") -> Above:
+def above_of(name: str, value: str | float) -> Above:
     """A threshold: a share of the largest ("1 %" or 0.01); for decay a time ("3 s").
 
     >>> above_of("peak-share", "1 %"), above_of("decay", "2 min")

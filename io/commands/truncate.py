@@ -135,7 +135,7 @@ def _threshold(text: str) -> Above:
         )
     if name.strip() not in MEASURES:
         raise unknown_measure(name.strip())
-    return above_of(name.strip(), value.strip(), where="--above")
+    return above_of(name.strip(), value.strip())
 
 
 def _modes(
