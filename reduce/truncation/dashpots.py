@@ -17,10 +17,11 @@ holds pointwise; between the frequencies asked for nothing is claimed.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 
-from modesieve.reduce.arrays import Complex, Real, Sparse
+from modesieve.reduce.arrays import Complex, Ints, Real, Sparse
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.model import Damping, Structure
@@ -106,7 +107,7 @@ def loop_of(model: Structure) -> Loop:
     parts = [part for part in (model.damping.viscous, model.damping.stiffness_loss) if part is not None]
     if not parts:
         raise ChoiceError("there is no local damper", expected="a viscous matrix or an imaginary stiffness", got="none")
-    touched = np.flatnonzero(sum(np.asarray(abs(part).sum(axis=1)).ravel() for part in parts))
+    touched: Ints = np.flatnonzero(sum(np.asarray(abs(part).sum(axis=1)).ravel() for part in parts))
     if len(touched) > 20 * _MOST:
         raise _too_many(len(touched))
     left, size, _ = np.linalg.svd(np.hstack([_dense(part, touched) for part in parts]), full_matrices=False)
@@ -122,7 +123,7 @@ def loop_of(model: Structure) -> Loop:
     return Loop(L=L, R=squeezed(model.damping.viscous), T=squeezed(model.damping.stiffness_loss))
 
 
-def _dense(part: Sparse, touched: Real) -> Real:
+def _dense(part: Sparse, touched: Ints) -> Real:
     return np.asarray(part[touched][:, touched].toarray())
 
 
@@ -147,8 +148,8 @@ def opened(model: Structure, loop: Loop) -> Structure:
             got="damping ratios of modes",
         )
     r, p, m = loop.L.shape[1], model.p, model.m
-    kinds = {name: getattr(model, name) for name in ("Cv", "Ca") if getattr(model, name) is not None}
-    zero = np.zeros((r, model.n))
+    kinds: dict[str, Any] = {name: getattr(model, name) for name in ("Cv", "Ca") if getattr(model, name) is not None}
+    wider: dict[str, Any] = {name: np.vstack([C, np.zeros((r, model.n))]) for name, C in kinds.items()}
     Du = np.zeros((p + r, m + r))
     Du[:p, :m] = model.Du
     weights_in = np.concatenate([model.amplitudes, np.ones(r)])
@@ -166,7 +167,7 @@ def opened(model: Structure, loop: Loop) -> Structure:
         outputs=tuple(
             replace(outputs[0], name=f"port {i + 1}", resolution=float(a)) for i, a in enumerate(weights_out)
         ),
-        **{name: np.vstack([C, zero]) for name, C in kinds.items()},
+        **wider,
     )
 
 
