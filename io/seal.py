@@ -11,13 +11,17 @@ from typing import Any
 import h5py
 import numpy as np
 
+from modesieve.reduce.errors import FileError
+
 SEAL = "seal"
+#: No file of this program nests deeper; a group that contains itself would go on for ever.
+DEEPEST = 20
 
 
 def digest(file: Any) -> str:
     """SHA-256 (hex) over the names, attributes and values of an HDF5 file, without the seal itself."""
     sha = hashlib.sha256()
-    _group(sha, file, top=True)
+    _group(sha, file)
     return sha.hexdigest()
 
 
@@ -26,9 +30,11 @@ def write_seal(file: Any) -> None:
     file.attrs[SEAL] = digest(file)
 
 
-def _group(sha: Any, group: Any, *, top: bool = False) -> None:
+def _group(sha: Any, group: Any, depth: int = 0) -> None:
+    if depth > DEEPEST:
+        raise FileError("groups are nested too deeply", expected=f"at most {DEEPEST} levels", where=str(group.name))
     for name in sorted(group.attrs):
-        if not (top and name == SEAL):
+        if not (depth == 0 and name == SEAL):
             _value(sha, f"@{name}", group.attrs[name])
     for name in sorted(group):
         link = group.get(name, getlink=True)
@@ -38,7 +44,7 @@ def _group(sha: Any, group: Any, *, top: bool = False) -> None:
         node = group[name]
         sha.update(f"{group.name}/{name}\0".encode())
         if isinstance(node, h5py.Group):
-            _group(sha, node)
+            _group(sha, node, depth + 1)
         else:
             for attribute in sorted(node.attrs):
                 _value(sha, f"@{attribute}", node.attrs[attribute])

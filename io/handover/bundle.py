@@ -13,9 +13,10 @@ from modesieve.io.atomic import replacing
 from modesieve.io.files import load
 from modesieve.io.handover.containers import write_form
 from modesieve.io.handover.forms import second_order_form, state_space_form
-from modesieve.reduce.errors import ChoiceError, FileError
+from modesieve.reduce.errors import ChoiceError, FileError, ModesieveError
 from modesieve.reduce.response.small import SecondOrderModal
 from modesieve.reduce.truncation.records import ReducedModel
+from modesieve.reduce.truncation.weight import uncertainty_weight
 
 MANIFEST, README, SMALL = "manifest.json", "README.txt", "small.h5"
 #: A member of a hand-over is never larger than this when it is read back.
@@ -48,6 +49,31 @@ def _forms(small: ReducedModel, scratch: Path) -> Iterator[Path]:
         yield from write_form(scratch / f"state-space{ending}", state_space_form(small), container)  # type: ignore[arg-type]
     if isinstance(small.system, SecondOrderModal):
         yield from write_form(scratch / "second-order.npz", second_order_form(small), "npz")
+    weight = weight_text(small)
+    if weight:
+        (scratch / "weight.json").write_text(weight, encoding="utf-8")
+        yield scratch / "weight.json"
+
+
+def weight_text(small: ReducedModel) -> str:
+    """The uncertainty weight that covers the guaranteed error on the whole axis, as JSON; "" where there is none."""
+    if small.hub is None or small.guarantee is None or not small.guarantee.holds:
+        return ""
+    try:
+        weight = uncertainty_weight(small.hub, small.system)
+    except ModesieveError:
+        return ""
+    pairs = {
+        name: [[v.real, v.imag] for v in values] for name, values in (("zeros", weight.zeros), ("poles", weight.poles))
+    }
+    about = {
+        "covers": "largest singular value of the additive error, channels weighted by amplitude and resolution",
+        "gain": weight.gain,
+        "median_over_cover_db": weight.median_db,
+        "checked_to_rad_per_s": weight.certain_to,
+        "notes": list(weight.notes),
+    }
+    return json.dumps(about | pairs, indent=1, allow_nan=False) + "\n"
 
 
 def _write_zip(path: Path, members: dict[str, Path], readme: str) -> list[str]:

@@ -128,12 +128,19 @@ def _header_notes(model: ReducedModel) -> list[str]:
 @click.option("--save-state", type=FILE, help="Save the state at the last time, to go on from with --start.")
 @click.option("-o", "--output", type=FILE, required=True)
 def simulate(small: Path, inputs: Path, hold: Any, start: str, save_state: Path | None, output: Path) -> None:
-    """Run a small model through an input history (CSV: time in s, then one column a channel)."""
-    from modesieve.io.handover.histories import read_inputs, write_outputs
+    """Run a small model through an input history (CSV: time in s, then one column a channel).
+
+    A first column named hz makes it random loads: one-sided power spectral densities (unit^2/Hz), uncorrelated between
+    inputs; OUT.csv then holds every output's root mean square and how far it may be off.
+    """
+    from modesieve.io.handover.histories import is_spectrum, read_inputs, write_outputs
     from modesieve.reduce.response.simulate import simulate as run
 
     model = load_small(small)
     origin = model.modes.origin
+    if is_spectrum(inputs):
+        _random(model, inputs, output)
+        return
     given = read_inputs(inputs, tuple(c.name for c in origin.inputs))
     state = start_state(model, start, given.u[0])
     began = time.perf_counter()
@@ -149,6 +156,42 @@ def simulate(small: Path, inputs: Path, hold: Any, start: str, save_state: Path 
     span = float(given.t[-1] - given.t[0])
     click.echo(f"{len(given.t)} rows over {span:.4g} s in {spent:.3g} s: {span / max(spent, 1e-9):.3g} times real time")
     click.echo(f"wrote {output}")
+
+
+def _random(model: ReducedModel, spectrum: Path, output: Path) -> None:
+    """RMS of every output under the given densities, with its guaranteed error where the model carries a guarantee."""
+    from modesieve.io.atomic import write_text
+    from modesieve.io.handover.histories import read_inputs, safe_header
+    from modesieve.reduce.response.simulate import random_response
+
+    origin = model.modes.origin
+    given = read_inputs(spectrum, tuple(c.name for c in origin.inputs))
+    hz, bound = resolved(model, given.t), None
+    psd = np.column_stack([np.interp(hz, given.t, column) for column in given.u.T])
+    if model.hub is not None and model.guarantee is not None and model.guarantee.holds:
+        omega = 2 * np.pi * hz
+        bound = np.abs(model.hub.response(omega) - model.response(omega)) + model.hub.entry_error(omega)
+    result = random_response(model.system, hz, psd, bound=bound)
+    rows = ["output,unit,rms,error at most"]
+    for k, channel in enumerate(origin.outputs):
+        error = "" if result.error is None else repr(float(result.error[k]))
+        rows.append(f"{safe_header(channel.name)},{safe_header(channel.unit)},{float(result.rms[k])!r},{error}")
+        click.echo(
+            f"{channel.name}: {result.rms[k]:.4g} {channel.unit} rms" + (f", off by at most {error}" if error else "")
+        )
+    write_text(output, "\n".join(rows) + "\n")
+    click.echo(f"wrote {output}: from {hz[0]:g} to {hz[-1]:g} Hz, integrated on {len(hz)} frequencies")
+
+
+def resolved(model: ReducedModel, hz: Any) -> Any:
+    """The given frequencies with forty more across every resonance of the small model between them."""
+    poles = model.system.poles
+    swinging = poles[poles.imag > 0]
+    centre, half = swinging.imag / (2 * np.pi), np.maximum(-swinging.real, 1e-6 * swinging.imag) / (2 * np.pi)
+    spread = np.sinh(np.linspace(-5, 5, 41))
+    more = (centre[:, None] + half[:, None] * spread).ravel()
+    even = np.linspace(hz[0], hz[-1], 2001)
+    return np.unique(np.concatenate([hz, even, more[(more > hz[0]) & (more < hz[-1])]]))
 
 
 def error_columns(model: ReducedModel, start: str, u: Any) -> dict[str, Any]:

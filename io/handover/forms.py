@@ -92,7 +92,7 @@ def sampling_notes(small: ReducedModel, dt: float) -> list[str]:
     if system is not small.system:
         lost = system.terms
         notes.append(f"{small.system.terms - lost} pseudo-modes became feedthrough: as motions they would fold")
-        if np.any(system.cv) or np.any(system.ca):
+        if isinstance(system, SecondOrderModal) and (np.any(system.cv) or np.any(system.ca)):
             notes.append("velocity and acceleration outputs lose what their pseudo-modes added")
     for f in folded_poles(system, dt, small.band):
         where = ", in the band: choose a shorter sample time or filter the input" if f.in_band else ""

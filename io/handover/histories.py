@@ -42,6 +42,11 @@ def read_inputs(path: Path, names: tuple[str, ...]) -> Inputs:
     return Inputs(t=table[:, 0], u=table[:, 1:], names=names)
 
 
+def is_spectrum(path: Path) -> bool:
+    """True when the first column is named hz: the table then holds power spectral densities over frequency."""
+    return _rows(path)[0][0].strip().lower() == "hz"
+
+
 def _rows(path: Path) -> list[list[str]]:
     try:
         with path.open(encoding="utf-8-sig", newline="") as file:

@@ -138,7 +138,7 @@ def _energy(table: Table) -> Scores:
 
 
 def _balanced(table: Table) -> Scores:
-    """``norm(c) norm(b)/(4 zeta omega^2)`` (Gregory 1984; Gawronski 2004); real: ``norm(c) norm(b)/(2 abs(lambda))``."""
+    """``norm(c) norm(b)/(4 zeta omega^2)`` (Gregory 1984; Gawronski); real: ``norm(c) norm(b)/(2 abs(lambda))``."""
     g, d = table.gains, _viscous(table.gains)
     with np.errstate(divide="ignore", invalid="ignore"):
         root = np.sqrt(np.maximum(g.x, 0.0))

@@ -116,16 +116,20 @@ class RandomResponse:
     hz: tuple[float, float]
 
 
-def random_response(system: SmallSystem, hz: Real, psd: Real, G: Real | None = None) -> RandomResponse:
+def random_response(
+    system: SmallSystem, hz: Real, psd: Real, G: Real | None = None, bound: Real | None = None
+) -> RandomResponse:
     """RMS of the outputs under one-sided input power spectral densities, uncorrelated between inputs.
 
     hz (w,) ascending; psd (w, m) in unit^2/Hz: ``rms_k^2 = int sum_l abs(R_kl)^2 S_l df`` by the trapezoidal rule, so
     hz must resolve the resonances. G (w, p, m): the full response there; then
-    ``abs(rms(G) - rms(R)) <= rms(G - R)`` (triangle inequality), which is returned as the error.
+    ``abs(rms(G) - rms(R)) <= rms(G - R)`` (triangle inequality), which is returned as the error. bound (w, p, m): an
+    upper bound of ``abs(G - R)`` in its place.
     """
     R = system.response(2 * np.pi * np.asarray(hz))
 
-    def rms(H: Complex) -> Real:
+    def rms(H: Complex | Real) -> Real:
         return np.sqrt(trapezoid(np.einsum("wpm,wm->wp", np.abs(H) ** 2, psd), hz, axis=0))
 
-    return RandomResponse(rms=rms(R), error=None if G is None else rms(G - R), hz=(float(hz[0]), float(hz[-1])))
+    gap = G - R if G is not None else bound
+    return RandomResponse(rms=rms(R), error=None if gap is None else rms(gap), hz=(float(hz[0]), float(hz[-1])))
