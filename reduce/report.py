@@ -2,13 +2,34 @@
 
 from __future__ import annotations
 
+import html
 import math
+import re
 from collections.abc import Iterable, Sequence
 from typing import Any
 
 import numpy as np
 
 _PREFIXES = ((1e9, "G"), (1e6, "M"), (1e3, "k"), (1.0, ""), (1e-3, "m"), (1e-6, "µ"))
+
+
+class ShowsAsTable:
+    """A record whose printed report is a table in a notebook."""
+
+    def _repr_html_(self) -> str:
+        return html_table(repr(self))
+
+
+def html_table(text: str) -> str:
+    """The aligned lines of a report as an HTML table; every text is escaped.
+
+    >>> html_table("Small\\n  kept  4 <b>")
+    '<table><caption>Small</caption><tr><td>kept</td><td>4 &lt;b&gt;</td></tr></table>'
+    """
+    first, *lines = text.splitlines() or [""]
+    rows = (re.split(r"\s{2,}", line.strip()) for line in lines if line.strip())
+    body = "".join("<tr>" + "".join(f"<td>{html.escape(cell)}</td>" for cell in row) + "</tr>" for row in rows)
+    return f"<table><caption>{html.escape(first)}</caption>{body}</table>"
 
 
 def aligned(title: str, rows: Iterable[tuple[str, str]]) -> str:

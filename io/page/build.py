@@ -25,6 +25,7 @@ from modesieve.io.page.payload import (
     term_statics,
     time_data,
 )
+from modesieve.reduce.comparison.promised import Promised, promised
 from modesieve.reduce.comparison.readiness import couplings
 from modesieve.reduce.comparison.records import Check, Comparison, Sweep
 from modesieve.reduce.modal.records import Modes, Ranking
@@ -80,6 +81,8 @@ def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Wor
     origin = modes.origin
     scale = origin.weigh(np.ones((origin.p, origin.m)))
     low, high = comparison.band
+    inside = full.omega[(full.omega >= low) & (full.omega <= high) & (full.omega > 0)]
+    promise = promised(small, ranking, inside, comparison.threshold)
     return {
         "kind": origin.kind,
         "fingerprint": origin.fingerprint,
@@ -101,12 +104,13 @@ def page_data(comparison: Comparison, check: Check, ranking: Ranking, words: Wor
         "modes": _rows_with_poles(modes, ranking),
         "by": ranking.by,
         "order": [int(n) for n in ranking.order],
-        "measure_names": list(ranking.measures),
+        "measure_names": [n for n, v in ranking.measures.items() if n == ranking.by or np.isfinite(v).any()],
         "undefined": ranking.undefined,
         "coupling": np.hstack(couplings(modes)).tolist(),
         "delivered": check_data(check),
         "tolerance": _tolerance(small.choice),
-        "sweep": None if comparison.sweep is None else sweep_data(comparison.sweep),
+        "sweep": None if comparison.sweep is None else sweep_data(comparison.sweep, promise),
+        "axis": axis_data(promise),
         "step": time_data(comparison.step, small),
         "shapes": shape_data(modes),
         "hub": hub_data(small, full.omega),
@@ -130,8 +134,17 @@ def _rows_with_poles(modes: Modes, ranking: Ranking) -> list[dict[str, Any]]:
     return rows
 
 
-def sweep_data(sweep: Sweep) -> dict[str, Any]:
-    """The sweep's local curves where there are any, else those of the peak."""
+def axis_data(promise: Promised | None) -> dict[str, Any] | None:
+    """The whole-axis error over the number of states with its floor, or the reason why there is none."""
+    if promise is None:
+        return None
+    if promise.axis is None or promise.floor is None:
+        return {"reason": promise.reason}
+    return {"states": promise.states.tolist(), "error": promise.axis.tolist(), "floor": promise.floor.tolist()}
+
+
+def sweep_data(sweep: Sweep, promise: Promised | None) -> dict[str, Any]:
+    """The sweep's local curves where there are any, else those of the peak; what is guaranteed beside them."""
     of = "local" if any(reference == "local" for _, reference in sweep.errors) else "peak"
     curves = [
         {
@@ -143,6 +156,9 @@ def sweep_data(sweep: Sweep) -> dict[str, Any]:
         for (statics, reference), values in sweep.errors.items()
         if reference == of
     ]
+    if promise is not None and of == "local":
+        guaranteed = {"name": "at every sample", "certainty": "guaranteed"}
+        curves.append(guaranteed | {"x": promise.kept.tolist(), "y": [number(v) for v in promise.local]})
     return {"by": sweep.ranked_by, "of": of, "curves": curves}
 
 

@@ -6,7 +6,7 @@ const modesieve = (() => {
   const trial = Trial.create(data), { omega, p, m } = trial, TWO_PI = 2 * Math.PI;
   const C = Charts, $ = (id) => document.getElementById(id), thermal = data.kind === "thermal";
   const el = (tag, text, props = {}) => Object.assign(document.createElement(tag), { textContent: text ?? "" }, props);
-  const state = { pair: null, measure: data.by, level: null, pins: new Map(), rate: 0, errorKind: "local", sort: { key: "number", up: true }, focus: 1, result: null };
+  const state = { pair: null, measure: data.by, level: null, pins: new Map(), rate: 0, errorKind: "local", countView: "band", sort: { key: "number", up: true }, focus: 1, result: null };
 
   // ---- axes: hertz for structures, period for thermal ----------------------------------------------------------------
   const seconds = omega[Math.floor(omega.length / 2)] > 0 ? TWO_PI / omega[Math.floor(omega.length / 2)] : 1;
@@ -142,8 +142,15 @@ const modesieve = (() => {
   function drawCount() {
     const s = data.sweep;
     if (!s) { $("count").classList.add("hidden"); return; }
+    if (state.countView === "axis") { drawAxis(); return; }
     $("count-note").textContent = `in the order of ${s.by}`;
     C.count("count-chart", { curves: s.curves, floor: null, now: trial.kept().size, tolerance: data.tolerance && data.tolerance.of === s.of ? data.tolerance.value : null, xTitle: "kept modes", yTitle: `worst error, ${ERROR_KINDS[s.of] ? s.of : "absolute"}` });
+  }
+  // The whole-axis error over the number of states, and only there the floor.
+  function drawAxis() {
+    const a = data.axis;
+    $("count-note").textContent = "weighted error, all frequencies";
+    C.count("count-chart", { curves: [{ name: "whole axis", certainty: "guaranteed", x: a.states, y: a.error }], floor: { x: a.states, y: a.floor.map((v) => v || null) }, now: state.result.states, tolerance: null, xTitle: "states", yTitle: "worst error, weighted" });
   }
   function drawTime() {
     if (!data.step) { $("time").classList.add("hidden"); return; }
@@ -260,6 +267,7 @@ const modesieve = (() => {
     fillSelect("measure", data.measure_names.map((n) => [n, n]), state.measure, (v) => { state.measure = v; state.level = levelFor(trial.kept().size); drawSieve(); });
     fillSelect("rate", RATES.map(([n, v]) => [v, n]), 0, (v) => { state.rate = Number(v); drawResponse(); }); $("rate").parentElement.classList.toggle("hidden", data.kind !== "structure");
     fillSelect("error-kind", Object.entries(ERROR_KINDS).map(([k]) => [k, { local: "local", peak: "of the peak", phase: "phase" }[k]]), "local", (v) => { state.errorKind = v; drawError(); });
+    fillSelect("count-view", [["band", "in the band"], ["axis", "whole axis, over states"]], "band", (v) => { state.countView = v; drawCount(); }); $("count-pick").classList.toggle("hidden", !data.axis || !data.axis.states);
     $("sieve-line").addEventListener("keydown", (event) => {
       const by = { ArrowUp: -1, ArrowRight: 1, ArrowDown: 1, ArrowLeft: -1, PageUp: -10, PageDown: 10 }[event.key];
       if (by) { event.preventDefault(); moveCount(by); }

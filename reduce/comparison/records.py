@@ -9,7 +9,7 @@ import numpy as np
 from modesieve.reduce.arrays import Complex, Real
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.model import Model
-from modesieve.reduce.report import aligned, columns, number, share, span
+from modesieve.reduce.report import ShowsAsTable, aligned, columns, number, share, span
 from modesieve.reduce.response.records import Certainty, ErrorFigure, FullResponse
 from modesieve.reduce.truncation.records import ReducedModel
 
@@ -95,7 +95,7 @@ class TimeResponse:
 
 
 @dataclass(frozen=True, kw_only=True, eq=False, repr=False)
-class Comparison:
+class Comparison(ShowsAsTable):
     """Everything the comparison stage knows; figures, reports and the page read nothing else."""
 
     model: Model

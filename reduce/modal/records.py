@@ -9,6 +9,7 @@ import numpy as np
 
 from modesieve.reduce.arrays import Complex, Ints, Real, frozen
 from modesieve.reduce.model import Model, Origin
+from modesieve.reduce.report import ShowsAsTable, aligned, columns, number
 from modesieve.reduce.response.small import SmallSystem
 
 Completeness: TypeAlias = Literal["all", "counted", "no"]
@@ -33,8 +34,17 @@ class Certificate:
     reason: str = ""
 
 
+#: Rows of a printed list of modes.
+_SHOWN = 12
+_HEAD = ("mode", "Hz", "time constant s", "damping %", "cluster", "always kept")
+
+
+def _worst(residual: Real) -> str:
+    return f"at most {number(float(residual.max()))}" if residual.size else ""
+
+
 @dataclass(frozen=True, kw_only=True, eq=False)
-class Modes:
+class Modes(ShowsAsTable):
     """Computed modes of one model, in ascending ``abs(eigenvalue)``; numbers are 1-based and stay with the mode.
 
     origin: what is remembered of the full model; model: the full model itself, None when read from a file.
@@ -116,13 +126,27 @@ class Modes:
         size = np.abs(self.eigenvalue)
         return np.where(size > 0, self.decay_rate / np.where(size > 0, size, 1.0), np.nan)
 
+    def __repr__(self) -> str:
+        c = self.certificate
+        count = {"all": "every mode is known", "counted": f"{c.expected} counted, {c.found} found"}.get(
+            c.complete, c.reason
+        )
+        title = f"{len(self)} modes of {self.origin.title or 'a model'} ({self.origin.kind}, {self.origin.n} unknowns)"
+        head = aligned(title, [("complete", count), ("solver", self.solver), ("residual", _worst(self.residual))])
+        return "\n".join([head, columns(_HEAD, [self._row(i) for i in range(min(len(self), _SHOWN))])])
+
+    def _row(self, i: int) -> list[str]:
+        group = "-".join(map(str, self.cluster[i]))
+        values = (self.frequency_hz[i], self.time_constant[i], 100 * self.damping_ratio[i])
+        return [str(i + 1), *(number(float(v)) for v in values), group, self.always_kept[i]]
+
     def modes_of(self, term: int) -> Ints:
         """1-based numbers of the modes that share a term."""
         return np.flatnonzero(self.term == term) + 1
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
-class Ranking:
+class Ranking(ShowsAsTable):
     """Every measure side by side, and the order by one of them.
 
     measures: name to (k,) values per mode, nan where undefined; undefined: name to the reason, where any value is.
@@ -137,3 +161,11 @@ class Ranking:
     order: Ints
     band: tuple[float, float] | None = None
     warnings: tuple[str, ...] = ()
+
+    def __repr__(self) -> str:
+        title = f"Ranking of {len(self.modes)} modes by {self.by}"
+        values = self.measures[self.by]
+        rows = [
+            [str(n), number(float(self.modes.frequency_hz[n - 1])), number(float(values[n - 1]))] for n in self.order
+        ]
+        return "\n".join([title, columns(("mode", "Hz", self.by), rows[:_SHOWN])])

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from modesieve.reduce.arrays import Real, frozen
+from modesieve.reduce.report import ShowsAsTable, aligned, span
 from modesieve.reduce.response.records import ErrorFigure
 
 
@@ -32,7 +33,7 @@ class SpotCheck:
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
-class Guarantee:
+class Guarantee(ShowsAsTable):
     """The guaranteed error of one small model over one band, with its grounds.
 
     holds: True when every figure below is guaranteed; reason: why not, or "". formula: what was proved, in words.
@@ -70,6 +71,17 @@ class Guarantee:
     def __post_init__(self) -> None:
         for name in ("omega", "difference", "hub_error", "reference"):
             object.__setattr__(self, name, frozen(np.asarray(getattr(self, name), dtype=float)))
+
+    def __repr__(self) -> str:
+        rows = [
+            ("holds", "yes" if self.holds else f"no: {self.reason}"),
+            ("band", span(self.band)),
+            ("of peak", str(self.peak) if self.peak else ""),
+            ("of local", str(self.local) if self.local else ""),
+            ("grounds", f"{self.modes_below} modes below the counting point, {self.levels} tail levels"),
+            ("checked", f"{len(self.spot_checks)} frequencies that no other step used"),
+        ]
+        return aligned("Guarantee", [*rows, *(("note", note) for note in self.notes)])
 
     @property
     def upper(self) -> Real:

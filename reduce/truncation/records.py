@@ -7,7 +7,7 @@ from typing import Any, Literal, TypeAlias
 
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.modal.records import Modes, Ranking
-from modesieve.reduce.report import aligned, number, runs, share, span
+from modesieve.reduce.report import ShowsAsTable, aligned, number, runs, share, span
 from modesieve.reduce.response.records import ErrorFigure, FullResponse
 from modesieve.reduce.response.small import SmallSystem
 from modesieve.reduce.truncation.guarantee import Guarantee
@@ -63,7 +63,7 @@ Choice: TypeAlias = Count | Band | Keep | Tolerance | tuple[Above, ...]
 
 
 @dataclass(frozen=True, kw_only=True, eq=False, repr=False)
-class ReducedModel:
+class ReducedModel(ShowsAsTable):
     """A small model, what it was cut from, and how wrong it is.
 
     kept: mode numbers in ascending order (() when a file holds none). system: the small model with its statics.
