@@ -57,7 +57,6 @@ const Charts = (() => {
       shapes.push({ type: "line", xref: "x", yref: "paper", x0: v.edge, x1: v.edge, y0: 0, y1: 1, line: { color: c.ink, width: 1.2, dash: "dash" } });
       notes.push({ xref: "x", yref: "paper", x: Math.log10(v.edge), y: 1, text: "counted to here", showarrow: false, textangle: -90, xanchor: "right", yanchor: "top", font: { size: 11, color: c.quiet } });
     }
-    shapes.push({ name: "sieve line", type: "line", xref: "paper", yref: "y", x0: 0, x1: 1, y0: v.level, y1: v.level, editable: true, line: { color: c.blue, width: 3 } });
     draw(id, traces, layout(c, { shapes, annotations: notes, dragmode: false, showlegend: true,
       xaxis: axis(c, v.xTitle, { ...log, range: v.xRange.map(Math.log10) }), yaxis: axis(c, v.yTitle, { ...log, range: v.yRange.map(Math.log10) }) }));
   }

@@ -3,7 +3,7 @@
 
 const modesieve = (() => {
   const data = JSON.parse(document.getElementById("data").textContent);
-  const trial = Trial.create(data), { omega, p, m } = trial, TWO_PI = 2 * Math.PI;
+  const trial = Trial.create(data), { omega, p, m } = trial, TWO_PI = 2 * Math.PI, SIEVE_FLOOR = 1e-6;
   const C = Charts, $ = (id) => document.getElementById(id), thermal = data.kind === "thermal";
   const el = (tag, text, props = {}) => Object.assign(document.createElement(tag), { textContent: text ?? "" }, props);
   const state = { pair: null, measure: data.by, level: null, pins: new Map(), rate: 0, errorKind: "local", countView: "band", sort: { key: "number", up: true }, focus: 1, result: null };
@@ -83,7 +83,7 @@ const modesieve = (() => {
 
   // ---- charts -----------------------------------------------------------------------------------------------------------
   function drawSieve() {
-    const bottom = 1e-6, xsAll = data.modes.map(grainX).filter((x) => x !== null), edge = data.counted_to === null ? null : thermal ? 1 / data.counted_to / tick : data.counted_to / TWO_PI;
+    const bottom = SIEVE_FLOOR, xsAll = data.modes.map(grainX).filter((x) => x !== null), edge = data.counted_to === null ? null : thermal ? 1 / data.counted_to / tick : data.counted_to / TWO_PI;
     const inside = [...xsAll, ...bandX.filter(Number.isFinite), ...(edge ? [edge] : [])].filter((x) => x > 0);
     const lo = Math.min(...inside) / 1.35, hi = Math.max(...inside) * 1.35;
     const grains = data.modes.filter((r) => r.number === Math.min(...(r.cluster.length ? r.cluster.filter((n) => byNumber.get(n).term === r.term) : [r.number]))).map((r) => ({
@@ -91,6 +91,7 @@ const modesieve = (() => {
       label: r.always ? r.always : r.cluster.length > 1 ? String(r.cluster.length) : "", hover: grainWords(r) }));
     C.sieve("sieve-chart", { grains, level: Math.max(state.level, bottom), band: thermal ? bandX : [Math.max(bandX[0], lo), bandX[1]], edge, xRange: thermal ? [hi, lo] : [lo, hi], yRange: [bottom / 1.5, 2.2],
       xTitle: thermal ? `time constant, ${tickUnit} (slow to fast)` : "frequency, Hz", yTitle: `${state.measure}, share of the largest` });
+    placeLine();
     const line = $("sieve-line");
     line.setAttribute("aria-valuemax", data.modes.length); line.setAttribute("aria-valuenow", trial.kept().size);
     line.setAttribute("aria-valuetext", `${trial.kept().size} of ${data.modes.length} modes kept`);
@@ -247,11 +248,19 @@ const modesieve = (() => {
     $("modes-note").textContent = `${trial.kept().size} kept of ${data.modes.length}; tick to keep, click a heading to sort`;
   }
 
+  let queue = [], painting = false;
+
   // ---- refresh ------------------------------------------------------------------------------------------------------------
   function refresh() {
     state.result = trial.evaluate();
-    banner(); fillTable(); fillPairs(); drawSieve(); drawResponse(); drawError(); drawCount();
-    clearTimeout(refresh.later); refresh.later = setTimeout(() => { drawTime(); drawPoles(); }, 60);
+    banner(); fillTable();
+    queue = [drawSieve, drawResponse, drawError, fillPairs, drawCount, drawTime, drawPoles];
+    if (!painting) { painting = true; requestAnimationFrame(paint); }
+  }
+  // One chart a frame: a tick answers at once, and a newer one starts the charts over.
+  function paint() {
+    const next = queue.shift();
+    if (next) { next(); requestAnimationFrame(paint); } else painting = false;
   }
   function choosePair(e) { state.pair = e; fillPairs(); drawResponse(); drawError(); drawTime(); }
   function focusRow(number) { state.focus = number; fillTable(); if (shapes) shapes.show(number); }
@@ -279,14 +288,29 @@ const modesieve = (() => {
       focusRow(Number(row.dataset.number));
     });
     const chart = $("sieve-chart");
-    chart.on("plotly_relayout", lineMoved); chart.on("plotly_relayouting", lineMoved);
+    bindLine();
     chart.on("plotly_click", (event) => { const n = event.points[0].customdata; if (n) { toggle(n); focusRow(n); } });
     matchMedia("(prefers-color-scheme: dark)").addEventListener("change", () => { refresh(); drawCoupling(); });
     window.addEventListener("beforeprint", () => { for (const d of document.querySelectorAll(".chart")) Plotly.Plots.resize(d); });
   }
-  function lineMoved(change) {
-    const key = Object.keys(change).find((k) => /^shapes\[\d+\]\.y0$/.test(k));
-    if (key) moveLine((change[key] + change[key.replace("y0", "y1")]) / 2);
+  // The sieve line is a handle of its own over the chart: its height is the level on the logarithmic axis.
+  const plotArea = () => $("sieve-chart").querySelector(".nsewdrag").getBoundingClientRect();
+  const LOW = Math.log10(SIEVE_FLOOR / 1.5), HIGH = Math.log10(2.2);
+  function placeLine() {
+    const area = plotArea(), frame = $("sieve-line").getBoundingClientRect(), handle = $("sieve-handle");
+    const share01 = (Math.log10(Math.max(state.level, SIEVE_FLOOR)) - LOW) / (HIGH - LOW);
+    Object.assign(handle.style, { left: `${area.left - frame.left}px`, width: `${area.width}px`, top: `${area.bottom - frame.top - share01 * area.height - 8}px` });
+  }
+  function bindLine() {
+    const handle = $("sieve-handle");
+    handle.addEventListener("pointerdown", (event) => { handle.setPointerCapture(event.pointerId); event.preventDefault(); });
+    handle.addEventListener("pointermove", (event) => {
+      if (!handle.hasPointerCapture(event.pointerId)) return;
+      const area = plotArea(), up = Math.min(1, Math.max(0, (area.bottom - event.clientY) / area.height));
+      moveLine(10 ** (LOW + up * (HIGH - LOW)));
+      placeLine();
+    });
+    window.addEventListener("resize", placeLine);
   }
   function fillSelect(id, options, value, then) {
     $(id).replaceChildren(...options.map(([v, text]) => el("option", text, { value: v })));
@@ -300,7 +324,7 @@ const modesieve = (() => {
   const shapes = data.shapes ? Shapes.create(data.shapes, { canvas: $("shape-canvas"), button: $("shape-play"), title: $("shape-title"), words: (n) => grainWords(byNumber.get(n)) }) : null;
   header(); facts(); buildPairs();
   trial.set(data.delivered.kept); state.result = trial.evaluate(); state.level = levelFor(data.delivered.kept.length);
-  buildTable(); deliver(); bind(); drawCoupling(); drawTime(); drawPoles();
+  buildTable(); deliver(); drawSieve(); bind(); drawCoupling();
   if (shapes) { $("shape").classList.remove("hidden"); focusRow(data.modes.find((r) => !r.always)?.number ?? 1); }
 
   // For tests and for readers with a console: the same calls as the mouse makes.

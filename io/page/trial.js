@@ -58,13 +58,18 @@ const Trial = ((N, T) => {
 
     const minus = (a, b) => ({ re: a.re.map((v, i) => v - b.re[i]), im: a.im.map((v, i) => v - b.im[i]) });
 
-    // The reference model: every computed mode and its tail levels, minus the small model, plus its own bound.
-    function guaranteed(R) {
-      if (!hub) return null;
+    function hubResponse() {
       const H = N.zeros(full.re.length);
       for (let i = 0; i < hub.terms.k; i++) N.addTerm(H, hub.system, i, omega, 1);
       N.addThrough(H, D, X, data.eta_rest, omega);
-      const gap = minus(H, R), sigma = N.largestSingular(gap, scale, omega.length, p, m);
+      return H;
+    }
+
+    // The reference model: every computed mode and its tail levels, minus the small model, plus its own bound.
+    function guaranteed(R) {
+      if (!hub) return null;
+      hub.response ||= hubResponse();
+      const gap = minus(hub.response, R), sigma = N.largestSingular(gap, scale, omega.length, p, m);
       const perPair = new Float64Array(full.re.length);
       for (let i = 0; i < perPair.length; i++) {
         perPair[i] = Math.hypot(gap.re[i], gap.im[i]) * scale[i % pairs] + hub.pairError[i];

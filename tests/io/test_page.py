@@ -14,6 +14,8 @@ import numpy as np
 import pytest
 import scipy.sparse as sp
 
+from modesieve import io
+from modesieve.io.commands import status_of
 from modesieve.io.page import Words, page_text
 from modesieve.io.page.payload import encode
 from modesieve.reduce.comparison.compare import compare
@@ -222,6 +224,32 @@ def test_ticking_moving_and_saving(opened: Any, tmp_path: Path) -> None:
     saved = tomllib.loads(Path(download.value.path()).read_text("utf-8"))
     assert saved["keep"] == sorted(page.evaluate("modesieve.kept()"))
     assert saved["model"] == ranking.modes.origin.fingerprint
+
+
+@pytest.mark.browser
+def test_the_line_is_dragged_and_the_list_is_cut_by(opened: Any, tmp_path: Path) -> None:
+    """Dragging the sieve line up drops modes; the saved keep list makes the same small model on the command line."""
+    comparison, ranking = compared("structure")
+    page = opened(comparison, ranking)
+    before = len(page.evaluate("modesieve.kept()"))
+    box = page.locator("#sieve-handle").bounding_box()
+    x, y = box["x"] + box["width"] / 3, box["y"] + box["height"] / 2
+    page.mouse.move(x, y)
+    page.mouse.down()
+    page.mouse.move(x, y - 60, steps=6)
+    page.mouse.up()
+    kept = sorted(page.evaluate("modesieve.kept()"))
+    assert 0 < len(kept) < before
+    with page.expect_download() as download:
+        page.click("#save")
+    model, small = tmp_path / "model.h5", tmp_path / "small.h5"
+    io.save(model, comparison.model)
+    low, high = (f"{w}rad/s" for w in comparison.band)
+    keep = tmp_path / "keep.toml"
+    keep.write_bytes(Path(download.value.path()).read_bytes())
+    arguments = ["truncate", str(model), "--band", low, high, "--keep-list", str(keep), "-o", str(small)]
+    assert status_of(arguments) == 0
+    assert list(io.load(small).kept) == kept  # type: ignore[union-attr]
 
 
 @pytest.mark.browser
