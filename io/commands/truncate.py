@@ -30,8 +30,9 @@ from modesieve.reduce.modal.rank import MEASURES, rank, unknown_measure
 from modesieve.reduce.modal.records import Modes
 from modesieve.reduce.model import Model
 from modesieve.reduce.progress import Listener
+from modesieve.reduce.truncation.certified import guaranteed as smallest
 from modesieve.reduce.truncation.promise import with_guarantee
-from modesieve.reduce.truncation.records import Above, Band, Choice, Count, Keep
+from modesieve.reduce.truncation.records import Above, Band, Choice, Count, Keep, Tolerance
 from modesieve.reduce.truncation.truncate import truncate as cut
 
 _CHOICES = "--keep, --tolerance, --keep-list or --above (or --band alone: every mode in it)"
@@ -49,6 +50,7 @@ _CHOICES = "--keep, --tolerance, --keep-list or --above (or --band alone: every 
 @click.option("--above", multiple=True, metavar="MEASURE=SHARE", help="Keep modes above a share; may repeat.")
 @click.option("--statics", type=click.Choice(["none", "feedthrough", "vectors"]), help="What stands for the rest.")
 @click.option("--levels", type=click.IntRange(1, 3), default=2, show_default=True, help="Tail levels of vectors.")
+@click.option("--guaranteed", is_flag=True, help="Choose modes and tail levels together by the guaranteed error.")
 @click.option("-o", "output", type=FILE, required=True, metavar="SMALL.h5", help="The small model's file.")
 @json_option
 def truncate(
@@ -63,17 +65,21 @@ def truncate(
     above: tuple[str, ...],
     statics: Any,
     levels: int,
+    guaranteed: bool,
     output: Path,
     as_json: bool,
 ) -> None:
     """Keep the modes that matter and write the small model with its error.
 
     Without --statics the best that is legal for all outputs is taken. --above takes a share of the largest ("1%"), for
-    decay a time ("decay=3s"); a mode that passes any of them stays.
+    decay a time ("decay=3s"); a mode that passes any of them stays. A tolerance is met by the measured error in rank
+    order; with --guaranteed by the guaranteed error of the best set of modes and tail levels.
     """
     _one_choice(keep, tolerance, keep_list, above, band)
     if of is not None and tolerance is None:
         raise click.UsageError("--of says what --tolerance refers to, and there is none")
+    if guaranteed and (tolerance is None or band is None):
+        raise click.UsageError("--guaranteed chooses by a --tolerance over a --band")
     if by not in MEASURES:
         raise unknown_measure(by)
     writable(output)
@@ -83,8 +89,11 @@ def truncate(
     with ProgressDisplay() as progress:
         found = _modes(model, modes_file, choice, around, progress)
         table = _ranked(found, choice, by, around)
-        small = cut(table, choice, statics=statics, levels=levels, band=around, progress=progress)
-        small = with_guarantee(small, progress)
+        if guaranteed and isinstance(choice, Tolerance) and around is not None:
+            small = smallest(table, choice, around, statics=statics, progress=progress)
+        else:
+            small = cut(table, choice, statics=statics, levels=levels, band=around, progress=progress)
+            small = with_guarantee(small, progress)
     save(output, small)
     if as_json:
         click.echo(dumps(reduced_object(small) | {"file": str(output)}), nl=False)
