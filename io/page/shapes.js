@@ -3,8 +3,7 @@
 
 const Shapes = (() => {
   function create(stored, view) {
-    const floats = (ref) => new Float64Array(Uint8Array.from(atob(ref.f8), (c) => c.charCodeAt(0)).buffer);
-    const xyz = floats(stored.xyz), moves = floats(stored.moves), nodes = xyz.length / 3, still = matchMedia("(prefers-reduced-motion: reduce)").matches;
+    const xyz = Numbers.array(stored.xyz), moves = Numbers.array(stored.moves), nodes = xyz.length / 3, still = matchMedia("(prefers-reduced-motion: reduce)").matches;
     const eye = [[Math.cos(0.6), Math.sin(0.6), 0], [-Math.sin(0.6) * 0.38, Math.cos(0.6) * 0.38, 0.92]];
     let mode = 1, playing = !still, phase = Math.PI / 2, size = 1;
     for (let a = 0; a < 3; a++) {
