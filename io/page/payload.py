@@ -27,8 +27,8 @@ from modesieve.reduce.response.small import FirstOrderModal, SecondOrderModal, S
 from modesieve.reduce.truncation.records import ReducedModel
 from modesieve.reduce.truncation.time_bound import step_error
 
-#: Mode shapes are left out of the page past this many numbers (4 bytes each before encoding).
-SHAPE_LIMIT = 600_000
+#: Mode shapes are left out of the page past this many numbers (8 bytes each before encoding).
+SHAPE_LIMIT = 200_000
 
 
 def encode(text: Any) -> str:
