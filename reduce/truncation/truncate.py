@@ -9,9 +9,11 @@ import numpy as np
 from modesieve.reduce.arrays import Real
 from modesieve.reduce.errors import ChoiceError
 from modesieve.reduce.modal.records import Modes, Ranking
+from modesieve.reduce.model import Thermal
 from modesieve.reduce.progress import Listener
 from modesieve.reduce.response.grid import checked_band
 from modesieve.reduce.response.records import ErrorFigure, FullResponse
+from modesieve.reduce.response.simulate import steady_state
 from modesieve.reduce.response.small import SmallSystem
 from modesieve.reduce.truncation.choice import Kept, resolve, sequence
 from modesieve.reduce.truncation.gauge import (
@@ -71,17 +73,18 @@ def truncate(
     else:
         kept = resolve(choice, modes, table)
         measured = _measure(modes, make(kept.numbers), around, full, progress)
+    system = make(kept.numbers)
     return ReducedModel(
         modes=modes,
         kept=kept.numbers,
-        system=make(kept.numbers),
+        system=system,
         statics=make.statics,  # type: ignore[arg-type]
         choice=choice,
         ranked_by=table.by if table is not None else "",
         band=around,
         error=measured.figure,
         samples=measured.full,
-        uniform=_uniform(modes, kept.numbers, make.statics),
+        uniform=_uniform(modes, kept.numbers, make.statics, system),
         notes=(*_why_none(modes, statics), *make.notes(kept.numbers, around), *kept.notes, *measured.notes),
         ranking=table,
         levels=make.levels,
@@ -89,11 +92,24 @@ def truncate(
     )
 
 
-def _uniform(modes: Modes, kept: tuple[int, ...], statics: str) -> Real | None:
-    """The kept share of a uniform field; pseudo-modes have no share that is known here."""
-    if modes.uniform is None or statics == "vectors":
+def _uniform(modes: Modes, kept: tuple[int, ...], statics: str, system: SmallSystem) -> Real | None:
+    """The state of one degree everywhere: the kept modes' share of it.
+
+    With pseudo-modes it is the steady state under the inputs that hold the full model there, ``F u = K 1`` (ambients at
+    one degree, no heat), where such inputs exist: statics are exact then.
+    """
+    if modes.uniform is None:
         return None
-    return modes.uniform[np.asarray(kept, dtype=int) - 1]
+    if statics != "vectors":
+        return modes.uniform[np.asarray(kept, dtype=int) - 1]
+    model = modes.model
+    if not isinstance(model, Thermal):
+        return None
+    hold = model.K @ np.ones(model.n)
+    u = np.linalg.lstsq(model.F, hold, rcond=None)[0]
+    if np.linalg.norm(model.F @ u - hold) > 1e-9 * np.linalg.norm(hold) or not np.any(hold):
+        return None
+    return steady_state(system, u)
 
 
 def _parts(ranking: Ranking | Modes, choice: Choice, band: tuple[float, float] | None) -> tuple[Modes, Ranking | None]:

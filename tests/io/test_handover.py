@@ -400,3 +400,14 @@ def test_thermal_histories_carry_their_guaranteed_error(tmp_path: Path) -> None:
     out = np.loadtxt(tmp_path / "out.csv", delimiter=",", skiprows=1)
     exact = run(find_modes(model).system, t, np.ones((41, 1))).y[:, 0]
     assert np.all(np.abs(out[:, 1] - exact) <= out[:, 2] * (1 + 1e-9))
+
+
+def test_a_uniform_start_with_tail_levels_stays(tmp_path: Path) -> None:
+    """With pseudo-modes too, everything at one temperature and its surroundings with it does not move."""
+    model = ladder(40)
+    band = (0.001, 0.05)
+    small = truncate(rank(find_modes(model, count=8), band=band), Count(modes=3), statics="vectors", band=band)
+    assert small.uniform is not None
+    t = np.linspace(0.0, 3000.0, 20)
+    result = run(small.system, t, np.full((20, 1), 25.0), state=25.0 * small.uniform)
+    np.testing.assert_allclose(result.y, 25.0, rtol=1e-9)
