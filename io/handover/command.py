@@ -125,9 +125,12 @@ def _header_notes(model: ReducedModel) -> list[str]:
 @click.argument("inputs", type=FILE)
 @click.option("--hold", type=click.Choice(["zero", "linear"]), default="zero", show_default=True)
 @click.option("--start", default="rest", show_default=True, help="rest, uniform:25degC, steady, or a file.")
+@click.option("--reference", metavar="T", help="Temperature that the model's zero stands for, e.g. '20 degC'.")
 @click.option("--save-state", type=FILE, help="Save the state at the last time, to go on from with --start.")
 @click.option("-o", "--output", type=FILE, required=True)
-def simulate(small: Path, inputs: Path, hold: Any, start: str, save_state: Path | None, output: Path) -> None:
+def simulate(
+    small: Path, inputs: Path, hold: Any, start: str, reference: str | None, save_state: Path | None, output: Path
+) -> None:
     """Run a small model through an input history (CSV: time in s, then one column a channel).
 
     A first column named hz makes it random loads: one-sided power spectral densities (unit^2/Hz), uncorrelated between
@@ -142,13 +145,14 @@ def simulate(small: Path, inputs: Path, hold: Any, start: str, save_state: Path 
         _random(model, inputs, output)
         return
     given = read_inputs(inputs, tuple(c.name for c in origin.inputs))
-    state = start_state(model, start, given.u[0])
+    zero = 0.0 if reference is None else in_model_degrees(parse_temperature(reference), model)
+    state = start_state(model, start, given.u[0], zero)
     began = time.perf_counter()
     result = run(model.system, given.t, given.u, hold=hold, state=state)
     spent = time.perf_counter() - began
     if save_state is not None:
         _save_state(save_state, model, result.state)
-    columns = {c.name: result.y[:, k] for k, c in enumerate(origin.outputs)}
+    columns = {c.name: result.y[:, k] + zero for k, c in enumerate(origin.outputs)}
     columns |= error_columns(model, start, given.u)
     write_outputs(output, given.t, columns)
     for line in _remarks(model, given.t, given.u):
@@ -206,8 +210,8 @@ def error_columns(model: ReducedModel, start: str, u: Any) -> dict[str, Any]:
     return {f"{c.name} error at most": np.full(len(u), worst[k]) for k, c in enumerate(origin.outputs)}
 
 
-def start_state(model: ReducedModel, start: str, first: Any) -> Any:
-    """The state that the words of --start mean. Raises ChoiceError or FileError."""
+def start_state(model: ReducedModel, start: str, first: Any, zero: float = 0.0) -> Any:
+    """The state that the words of --start mean; zero: the model's own zero in degrees. ChoiceError or FileError."""
     from modesieve.reduce.response.simulate import steady_state
 
     if start == "rest":
@@ -222,7 +226,7 @@ def start_state(model: ReducedModel, start: str, first: Any) -> Any:
                 got=f"a {model.modes.origin.kind} model",
                 remedy="start from rest, steady, or a saved state",
             )
-        return in_model_degrees(parse_temperature(start.removeprefix("uniform:")), model) * model.uniform
+        return (in_model_degrees(parse_temperature(start.removeprefix("uniform:")), model) - zero) * model.uniform
     return _load_state(Path(start), model)
 
 
@@ -318,3 +322,12 @@ def _run_brief(brief_file: Path, folder: Path) -> None:
     with ProgressDisplay() as progress:
         result = run(model, brief_settings(brief, model, base), progress)
     write_run(folder, result, brief=brief_file.read_text("utf-8"), report=run_text(result))
+    _static_report(folder / "report.pdf", result)
+
+
+def _static_report(path: Path, result: Any) -> None:
+    from modesieve.io.figures import save_report
+    from modesieve.io.page import page_words, report_lines
+
+    words = page_words(result.comparison, result.comparison.checks[0])
+    save_report(path, result.comparison, result.ranking, report_lines(words, result.comparison))

@@ -411,3 +411,31 @@ def test_a_uniform_start_with_tail_levels_stays(tmp_path: Path) -> None:
     t = np.linspace(0.0, 3000.0, 20)
     result = run(small.system, t, np.full((20, 1), 25.0), state=25.0 * small.uniform)
     np.testing.assert_allclose(result.y, 25.0, rtol=1e-9)
+
+
+def test_a_reference_temperature_shifts_outputs_and_start(tmp_path: Path) -> None:
+    """Rises above 20 degrees come out in degrees; a uniform start at 20 is the model's zero."""
+    model = ladder(8)
+    io.save(tmp_path / "all.h5", truncate(find_modes(model), Count(modes=8), band=(0.01, 1.0)))
+    (tmp_path / "in.csv").write_text("time,source\n0,0\n50,0\n", encoding="utf-8")
+    arguments = ["--start", "uniform:20degC", "--reference", "20 degC", "-o", tmp_path / "out.csv"]
+    call(simulate, tmp_path / "all.h5", tmp_path / "in.csv", *arguments)
+    out = np.loadtxt(tmp_path / "out.csv", delimiter=",", skiprows=1)
+    np.testing.assert_allclose(out[:, 1], 20.0, rtol=1e-12)
+
+
+def test_a_brief_becomes_a_bundle_with_page_and_report(tmp_path: Path) -> None:
+    """`handover BRIEF.toml` runs the brief and bundles page, PDF, brief and forms; review accepts the zip."""
+    import zipfile
+
+    from modesieve.io.commands import status_of
+
+    model = chain(40, damping=Damping(base=ModalRatio(ratio=0.02)))
+    io.save(tmp_path / "model.h5", model)
+    brief = 'model = "model.h5"\n[modes]\nband = ["0.001 Hz", "0.1 Hz"]\n[keep]\ntolerance = "5 %"\n'
+    (tmp_path / "job.toml").write_text(brief, encoding="utf-8")
+    assert status_of(["handover", str(tmp_path / "job.toml"), "-o", str(tmp_path / "out.zip")]) == 0
+    with zipfile.ZipFile(tmp_path / "out.zip") as archive:
+        names = set(archive.namelist())
+    assert {"page.html", "report.pdf", "brief.toml", "keep.toml", "second-order.npz", "state-space.json"} <= names
+    assert status_of(["review", str(tmp_path / "out.zip"), "--full", str(tmp_path / "model.h5")]) == 0
