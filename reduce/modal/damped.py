@@ -35,13 +35,15 @@ from modesieve.reduce.response.small import FirstOrderModal
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class _Parts:
-    """Everything in block coordinates: A block diagonal (r, r), B (r, m), displacements Q (n, r), direct X (n, m)."""
+    """Everything in block coordinates: A block diagonal (r, r), B (r, m), displacements Q (n, r), direct X (n, m);
+    jump: ``Q B`` (n, m) of the viscous structure, what a displacement does at once, and the size of its summands."""
 
     form: BlockForm
     A: Real
     B: Real
     Q: Real
     X: Real
+    jump: tuple[Real, Real]
 
 
 def damped_modes(
@@ -115,12 +117,14 @@ def _with_free(s: Dense, form: BlockForm, linear: Linear) -> _Parts:
     Q[:, 0::2] = s.free
     B = np.zeros((2 * f, s.F.shape[1]))
     B[1::2] = s.free.T @ s.F
+    B, Q = np.vstack([B, form.left @ linear.B]), np.hstack([Q, linear.Q @ form.right])
     return _Parts(
         form=BlockForm(terms=(*_free_terms(f), *form.terms), right=form.right, left=form.left),
         A=block_diag(*blocks),
-        B=np.vstack([B, form.left @ linear.B]),
-        Q=np.hstack([Q, linear.Q @ form.right]),
+        B=B,
+        Q=Q,
         X=linear.X,
+        jump=(Q @ B, np.abs(Q) @ np.abs(B)),
     )
 
 
@@ -147,12 +151,14 @@ def hysteretic(model: Structure, s: Dense, parts: _Parts) -> _Parts:
     oscillating = sum(int(np.count_nonzero(t.eigenvalues.imag > 0)) for t in parts.form.terms)
     found = hysteretic_form(linear, oscillating)
     blocks = [np.array([[0.0, 1.0], [0.0, 0.0]])] * (f // 2) + [t.block for t in found.terms]
+    # Whether rate outputs are proper is a matter of mass and dampers; the pairs below sum to zero only to order eta.
     return _Parts(
         form=BlockForm(terms=(*parts.form.terms[: f // 2], *found.terms), right=parts.form.right, left=parts.form.left),
         A=block_diag(*blocks),
         B=np.vstack([parts.B[:f], found.B]),
         Q=np.hstack([parts.Q[:, :f], found.Q]),
         X=np.real(linear.X),
+        jump=parts.jump,
     )
 
 
@@ -174,7 +180,7 @@ def _system(model: Structure, s: Dense, parts: _Parts) -> tuple[FirstOrderModal,
         C, rates = C + model.Cv @ V, model.Cv @ parts.Q
     if model.Ca is not None:
         _proper(model, model.Ca, parts.X, np.abs(parts.X))
-        _proper(model, model.Ca, parts.Q @ parts.B, np.abs(parts.Q) @ np.abs(parts.B))
+        _proper(model, model.Ca, *parts.jump)
         C, rates = C + model.Ca @ (V @ parts.A), model.Ca @ V + (0.0 if rates is None else rates)
     blocks = tuple(t.block for t in parts.form.terms)
     direct = None if rates is None else _direct(blocks, rates, parts.B)

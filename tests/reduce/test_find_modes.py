@@ -215,3 +215,16 @@ def test_facts_of_a_model() -> None:
     assert facts.next_steps
     apart = Structure(K=sp.block_diag([chain(3).K, chain(2).K]), M=sp.eye_array(5))
     assert sorted(inspect_model(apart).parts) == [2, 3]
+
+
+def test_imaginary_stiffness_with_an_acceleration_output_is_not_refused() -> None:
+    """A damped spring and an accelerometer: complex modes exist, and follow the full model to the order of eta."""
+    n, eta = 12, 0.01
+    loss = sp.csr_array(([eta], ([4], [4])), shape=(n, n))
+    base = chain(n)
+    damping = Damping(base=Rayleigh(alpha=0.02, beta=0.01), stiffness_loss=loss)
+    model = Structure(K=base.K, M=base.M, F=base.F, Ca=base.Cq, damping=damping)
+    omega = np.linspace(0.05, 1.9, 60)
+    G = full_response(model, omega).G
+    gap = np.abs(find_modes(model).system.response(omega) - G).max()
+    assert gap < 2 * eta * np.abs(G).max()
